@@ -1,0 +1,84 @@
+"""What to do next with a vehicle, as one sentence: the most urgent of what is open."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Literal, get_args
+
+from registry.domain.alert import ActWithin, Alert
+from registry.domain.calibration import Calibration
+from registry.domain.maintenance import MAINTENANCE_WORDS, Maintenance
+
+#: Most urgent first.
+ACT_WITHIN: tuple[ActWithin, ...] = get_args(ActWithin)
+
+LeadsTo = Literal["alert", "provisional", "baseline", "proposal", "nothing"]
+
+
+@dataclass(frozen=True)
+class NextStep:
+    """What to do, within what time (None: nothing), why, and which alert or calibration it leads to."""
+
+    act_within: ActWithin | None
+    sentence: str
+    why: str
+    leads_to: LeadsTo
+    target_id: str | None = None
+
+
+NOTHING_TO_DO = NextStep(None, "Nothing to do.", "", "nothing")
+
+
+def _of_alert(alert: Alert) -> NextStep:
+    if alert.standing == "returned":
+        sentence = "Acknowledge the alert: what it said no longer holds."
+        return NextStep("this week", sentence, alert.content.message, "alert", alert.alert_id)
+    content = alert.content
+    return NextStep(content.act_within, content.advice, content.message, "alert", alert.alert_id)
+
+
+def _of_proposal(proposal: Calibration) -> NextStep:
+    sentence = f"Decide on calibration {proposal.number}: put it into force or withdraw it."
+    return NextStep("this week", sentence, "It is proposed and waits for an approver.", "proposal", proposal.calibration_id)
+
+
+def next_step(
+    alerts: Sequence[Alert],
+    proposals: Sequence[Calibration],
+    anything_in_force: bool,
+    awaiting: Maintenance | None,
+) -> NextStep:
+    """The most urgent of what is open for one vehicle.
+
+    Parameters
+    ----------
+    alerts
+        The vehicle's open alerts; shelved ones ask for nothing.
+    proposals
+        Its calibrations that are proposed and not yet decided.
+    anything_in_force
+        Whether it has parameters to drive on.
+    awaiting
+        Maintenance that ended the window and after which no new calibration came into force.
+    """
+    steps: list[NextStep] = []
+    if not anything_in_force and not proposals:
+        sentence = "Enter provisional values, so that it can drive its calibration runs."
+        steps.append(NextStep("before it drives", sentence, "Nothing is in force.", "provisional"))
+    elif not anything_in_force:
+        sentence = f"Decide on calibration {proposals[0].number}: it has nothing to drive on until one is in force."
+        steps.append(
+            NextStep("before it drives", sentence, "Nothing is in force.", "proposal", proposals[0].calibration_id)
+        )
+    steps.extend(_of_alert(alert) for alert in alerts if alert.standing not in ("shelved", "closed"))
+    if awaiting is not None:
+        work = MAINTENANCE_WORDS[awaiting.kind]
+        sentence = "Drive calibration runs and propose a new baseline."
+        why = f"Its parameters may have moved with the work of {awaiting.done_at:%Y-%m-%d}: {work}."
+        steps.append(NextStep("this shift", sentence, why, "baseline"))
+    if anything_in_force:
+        steps.extend(_of_proposal(proposal) for proposal in proposals)
+    if not steps:
+        return NOTHING_TO_DO
+    return min(steps, key=lambda step: ACT_WITHIN.index(step.act_within or ACT_WITHIN[-1]))
