@@ -1,6 +1,7 @@
 """Closures and misclosures of many runs at once.
 
-A closure is any subset of four measured components, in this order: x, y, heading, straight distance. Absent components are
+A closure is any subset of four measured components, in this order: x, y, heading, straight distance. Absent components
+are
 carried as masked rows (zero residual, zero Jacobian, unit variance), so that all runs share one array shape and an
 absent component adds nothing to any likelihood or information.
 
@@ -84,7 +85,8 @@ def misclosure(closures: Closures, poses: Float) -> Float:
 
 
 def misclosure_covariance(closures: Closures, pose_covariance: Float, component: Float) -> Float:
-    """Covariance (n, 4, 4) of misclosures: the closure's own plus that of the predicted pose; unit on absent components.
+    """Covariance (n, 4, 4) of misclosures: the closure's own plus that of the predicted pose; unit on absent
+    components.
 
     Parameters
     ----------

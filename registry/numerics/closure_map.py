@@ -2,15 +2,19 @@ r"""A run folded into a small Chebyshev tensor, so that no evaluation walks thro
 
 The end position is :math:`W\,G(a, b)` with :math:`a = k_L/W`, :math:`b = k_R/W`, and G is entire. Around a centre
 :math:`(a_0, b_0)` write :math:`a = a_0(1 + s - \delta)`, :math:`b = b_0(1 + s + \delta)`. At a point of the path with
-counts (L, R) the heading is :math:`(1 + s)p + \delta q` with :math:`p = b_0R - a_0L`, :math:`q = b_0R + a_0L`, and an interval
+counts (L, R) the heading is :math:`(1 + s)p + \delta q` with :math:`p = b_0R - a_0L`, :math:`q = b_0R + a_0L`, and an
+interval
 advances :math:`(1 + s)w + \delta h`, so
 
 .. math:: G = (1 + s)\sum_j w_j e^{i(1+s)p_j}e^{i\delta q_j} + \delta\sum_j h_j e^{i(1+s)p_j}e^{i\delta q_j}
 
-with two Gauss points per sample (error :math:`\alpha^4/4320` of a sample that turns by :math:`\alpha`; samples that turn more
+with two Gauss points per sample (error :math:`\alpha^4/4320` of a sample that turns by :math:`\alpha`; samples that
+turn more
 than 0.1 rad are cut). The phases separate, so the values on a tensor grid of nodes are two matrix products. The
-Chebyshev coefficients of :math:`e^{izx}` on [-1, 1] are Bessel functions :math:`J_k(z)`, which gives the degree for a wanted
-error and a bound on the error in advance. The box is as wide as 8 rad of phase allow, at most 8 % in s and 1 % in delta.
+Chebyshev coefficients of :math:`e^{izx}` on [-1, 1] are Bessel functions :math:`J_k(z)`, which gives the degree for a
+wanted
+error and a bound on the error in advance. The box is as wide as 8 rad of phase allow, at most 8 % in s and 1 % in
+delta.
 
 The heading is exactly linear in (a, b) and is not approximated. The rolling-noise covariance is kept at the centre:
 it only weighs, so that its change over the box moves an estimate to second order.
@@ -44,6 +48,8 @@ _CHUNK = 8192
 #: Wanted bound on the error of the end position: a two-hundredth of a millimetre, far below any closure.
 WANTED_ERROR_M = 5e-6
 _HEADER = struct.Struct("<BBB5x16d")
+#: Where each element of a symmetric (3, 3) matrix stands in its stored upper triangle.
+_SYMMETRIC = np.array([[0, 1, 2], [1, 3, 4], [2, 4, 5]])
 
 
 class Prediction(NamedTuple):
@@ -148,7 +154,8 @@ def _transform(order: int) -> Float:
 def _orders(z_common: float, z_difference: float, wanted: float) -> tuple[tuple[int, int], float]:
     """Numbers of nodes for two phases and the relative error bound they give.
 
-    Interpolation at N nodes errs by at most twice the tail of the coefficients from N on; the linear factor in front of the
+    Interpolation at N nodes errs by at most twice the tail of the coefficients from N on; the linear factor in front
+    of the
     exponential moves the tail by one. A tensor errs by the first direction's error plus the second's times the
     Lebesgue constant of the first.
     """
@@ -187,7 +194,9 @@ def _values(left: Float, right: Float, common: Float, difference: Float) -> Comp
 
 
 def _phase_factors(phase: Float, nodes: Float) -> Complex:
-    """exp(i node phase), (nodes, samples). The nodes are symmetric, so half of them are conjugates of the other half."""
+    """exp(i node phase), (nodes, samples). The nodes are symmetric, so half of them are conjugates of the other
+    half.
+    """
     count = nodes.size
     half = (count + 1) // 2
     angle = nodes[:half, None] * phase[None, :]
@@ -218,7 +227,7 @@ class MapStack:
         """Position (n, 2) in each run's box, in half widths: inside is [-1, 1]."""
         ratio = parameters[:2] / parameters[2] / (self.centre[:, :2] / self.centre[:, 2:]) - 1.0
         common, difference = 0.5 * (ratio[:, 0] + ratio[:, 1]), 0.5 * (ratio[:, 1] - ratio[:, 0])
-        return np.stack([common, difference], axis=1) / self.half_width
+        return np.asarray(np.stack([common, difference], axis=1) / self.half_width)
 
     def inside(self, parameters: Float) -> Bool:
         """For each run, whether the parameters (3,) are in its box."""
@@ -290,7 +299,9 @@ def at_levers(prediction: Prediction, levers_m: Float) -> Prediction:
 
 
 def _chebyshev(x: Float, order: int) -> tuple[Float, Float]:
-    """Chebyshev polynomials and their derivatives (order, ...) at x (...), by recurrence: valid a little outside [-1, 1] too."""
+    """Chebyshev polynomials and their derivatives (order, ...) at x (...), by recurrence: valid a little outside [-1,
+    1] too.
+    """
     value = np.ones((order, *x.shape))
     slope = np.zeros((order, *x.shape))
     if order > 1:
@@ -303,11 +314,15 @@ def _chebyshev(x: Float, order: int) -> tuple[Float, Float]:
 
 
 def encode(item: ClosureMap) -> bytes:
-    """A map as bytes: version, shape, then centre, box, totals, noise (upper triangle), bound and coefficients, little-endian."""
+    """A map as bytes: version, shape, then centre, box, totals, noise (upper triangle), bound and coefficients,
+    little-endian.
+    """
     rows, columns = item.coefficients.shape
     upper = item.noise[np.triu_indices(3)]
     numbers = [*item.centre, *item.half_width, *item.totals, *upper, item.error_m, 0.0, 0.0]
-    return _HEADER.pack(MAP_VERSION, rows, columns, *numbers) + np.ascontiguousarray(item.coefficients, "<c16").tobytes()
+    return (
+        _HEADER.pack(MAP_VERSION, rows, columns, *numbers) + np.ascontiguousarray(item.coefficients, "<c16").tobytes()
+    )
 
 
 def decode(blob: bytes) -> ClosureMap:
@@ -320,13 +335,16 @@ def decode(blob: bytes) -> ClosureMap:
     """
     if len(blob) < _HEADER.size or blob[0] != MAP_VERSION:
         raise ValueError(f"not a closure map of version {MAP_VERSION}")
-    _, rows, columns, *numbers = _HEADER.unpack_from(blob)
+    rows, columns = blob[1], blob[2]
     if len(blob) != _HEADER.size + 16 * rows * columns:
         raise ValueError("a closure map of the wrong length")
-    noise = np.zeros((3, 3))
-    noise[np.triu_indices(3)] = numbers[7:13]
-    noise = noise + np.triu(noise, 1).T
+    numbers = np.frombuffer(blob, "<f8", 16, offset=8)
     coefficients = np.frombuffer(blob, "<c16", offset=_HEADER.size).reshape(rows, columns)
     return ClosureMap(
-        np.array(numbers[:3]), np.array(numbers[3:5]), np.array(numbers[5:7]), noise, coefficients.astype(np.complex128), numbers[13]
+        centre=numbers[:3],
+        half_width=numbers[3:5],
+        totals=numbers[5:7],
+        noise=numbers[7:13][_SYMMETRIC],
+        coefficients=coefficients,
+        error_m=float(numbers[13]),
     )

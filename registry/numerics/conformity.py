@@ -1,7 +1,8 @@
 """Is a quantity beyond its tolerance? Decided by the probability that the true value is outside (JCGM 106:2012).
 
 The conformance probability of an estimate y with standard uncertainty u against the interval [lower, upper] is
-Phi((upper - y)/u) - Phi((lower - y)/u). What is called beyond stays so until that probability has clearly fallen: a dead
+Phi((upper - y)/u) - Phi((lower - y)/u). What is called beyond stays so until that probability has clearly fallen: a
+dead
 band keeps the answer from chattering.
 """
 

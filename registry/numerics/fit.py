@@ -1,6 +1,7 @@
 r"""Restricted maximum likelihood of tick factors and width from the closures of many runs.
 
-A misclosure has the covariance :math:`V = R + qN + \tau^2 J S J^T`: the closure's own, rolling noise, and the spread of the
+A misclosure has the covariance :math:`V = R + qN + \tau^2 J S J^T`: the closure's own, rolling noise, and the spread
+of the
 parameters from run to run (load, surface, temperature), shaped like the usual tolerances. The quantities
 (ln tick factor, side ratio, ln width) follow from Gauss-Newton steps with the analytic Jacobian; after each step q (and
 :math:`\tau^2`, where the data ask for it) moves by one Fisher-scoring step on the restricted likelihood. One run's
@@ -12,7 +13,8 @@ order of one, and is told by the covariance: see :mod:`registry.numerics.observa
 
 References
 ----------
-.. [1] Patterson, Thompson: Recovery of inter-block information when block sizes are unequal. Biometrika 58 (1971) 545-554.
+.. [1] Patterson, Thompson: Recovery of inter-block information when block sizes are unequal. Biometrika 58 (1971)
+545-554.
 .. [2] Chong, Kleeman: Accurate odometry and error modelling for a mobile robot. IEEE ICRA 1997.
 .. [3] Wilson, Hilferty: The distribution of chi-square. PNAS 17 (1931) 684-688.
 .. [4] Birge: The calculation of errors by the method of least squares. Physical Review 40 (1932) 207-227.
@@ -37,7 +39,8 @@ METHOD_VERSION = "1"
 DEFAULT_ROLLING_NOISE_M = 2.5e-7
 #: How loosely that is held, in the logarithm of the variance.
 _ROLLING_PRIOR_SD = 1.5
-#: A direction the runs leave free is kept at the start value with these standard deviations; a third of any tolerance is far below.
+#: A direction the runs leave free is kept at the start value with these standard deviations; a third of any tolerance
+#: is far below.
 _WEAK_SD = np.array([1.0, 0.3, 1.0])
 #: Run-to-run spread of (tick factor, side ratio, width), in proportion to the usual tolerances.
 _SPREAD_SHAPE = np.diag([1.0, 0.09, 9.0])
@@ -64,7 +67,9 @@ class Stack(Protocol):
 
 @dataclass(frozen=True)
 class Hold:
-    """Quantities taken from elsewhere: which (3,), at what (ln tick factor, side ratio, ln width), and their covariance (3, 3)."""
+    """Quantities taken from elsewhere: which (3,), at what (ln tick factor, side ratio, ln width), and their
+    covariance (3, 3).
+    """
 
     which: Bool
     quantities: Float
@@ -135,7 +140,9 @@ class _State:
 
 @dataclass(frozen=True)
 class _Linear:
-    """The runs, linearised at one point: residuals e (n, 4), Jacobian j (n, 4, 3), noise and spread per unit (n, 4, 4)."""
+    """The runs, linearised at one point: residuals e (n, 4), Jacobian j (n, 4, 3), noise and spread per unit (n, 4,
+    4).
+    """
 
     e: Float
     j: Float
@@ -216,7 +223,9 @@ def _linearise(stack: Stack, closures: Closures, quantities: Float) -> _Linear:
     j = rows @ (prediction.jacobian @ (parameters[:, None] * to_relative))
     noise = rows @ prediction.noise @ rows.transpose(0, 2, 1)
     own = misclosure_covariance(closures, np.zeros((len(closures), 3, 3)), component)
-    return _Linear(misclosure(closures, prediction.pose), j, noise, own, closures.present.sum(axis=1).astype(np.float64))
+    return _Linear(
+        misclosure(closures, prediction.pose), j, noise, own, closures.present.sum(axis=1).astype(np.float64)
+    )
 
 
 def _whiten(linear: _Linear, state: _State) -> tuple[Float, Float]:
@@ -225,7 +234,7 @@ def _whiten(linear: _Linear, state: _State) -> tuple[Float, Float]:
     if state.spread > 0.0:
         covariance = covariance + state.spread * linear.spread
     inverse = np.linalg.inv(covariance)
-    return inverse, np.einsum("ni,nij,nj->n", linear.e, inverse, linear.e)
+    return inverse, np.asarray(np.einsum("ni,nij,nj->n", linear.e, inverse, linear.e))
 
 
 def normal_score(squared_distance: Float, count: Float) -> Float:
@@ -235,7 +244,9 @@ def normal_score(squared_distance: Float, count: Float) -> Float:
 
 
 def _weights(squared_distance: Float, count: Float, bounded: bool) -> Float:
-    """One within the bound; outside it, falling with the distance (bounded influence), later with its square (redescending)."""
+    """One within the bound; outside it, falling with the distance (bounded influence), later with its square
+    (redescending).
+    """
     variance = 2.0 / (9.0 * count)
     bound = count * (1.0 - variance + _BOUND_SCORE * np.sqrt(variance)) ** 3
     ratio = np.minimum(1.0, bound / np.maximum(squared_distance, 1e-300))
@@ -278,7 +289,9 @@ def _scores(
 def _update_noise(
     linear: _Linear, inverse: Float, weight: Float, information: Float, state: _State, guess: float
 ) -> float:
-    """One scoring step on ln q (held loosely at its guess) and, where in use, on ln of the spread; answers how far it moved."""
+    """One scoring step on ln q (held loosely at its guess) and, where in use, on ln of the spread; answers how far it
+    moved.
+    """
     parts = (linear.noise,) if state.spread == 0.0 else (linear.noise, linear.spread)
     values = np.array([state.rolling, state.spread][: len(parts)])
     score, fisher = _scores(linear, inverse, weight, information, state, parts)
@@ -327,7 +340,8 @@ def _summarise(stack: Stack, closures: Closures, state: _State, status: Status, 
         weight=weight,
         residual=linear.e,
         normalised=normal_score(distance, linear.count),
-        influence=_influence(linear, inverse, weight, full, free) @ relative_from_quantities(float(state.quantities[1])).T,
+        influence=_influence(linear, inverse, weight, full, free)
+        @ relative_from_quantities(float(state.quantities[1])).T,
         deviance=float(np.linalg.slogdet(full)[1]) + weighted - log_determinants,
     )
 

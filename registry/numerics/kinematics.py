@@ -140,7 +140,9 @@ def at_reference_point(poses: Float, lever_m: Float) -> Float:
 
 
 def lever_jacobian(heading_rad: Float, levers_m: Float) -> Float:
-    """How the pose of the reference point follows from the pose of the axle's middle: (n, 3, 3) for n headings and levers (n, 2)."""
+    """How the pose of the reference point follows from the pose of the axle's middle: (n, 3, 3) for n headings and
+    levers (n, 2).
+    """
     heading_rad = np.asarray(heading_rad, dtype=np.float64)
     cosine, sine = np.cos(heading_rad), np.sin(heading_rad)
     result = np.zeros((heading_rad.size, 3, 3))

@@ -4,7 +4,8 @@ Watched are the *tick factor* (mean of left and right), the *side ratio* (right 
 width*. A fit moves in :math:`\psi = (\ln\text{tick factor},\ \text{side ratio},\ \ln\text{width})`; with side ratio
 :math:`\rho`, :math:`k_L = 2k/(2+\rho)` and :math:`k_R = 2k(1+\rho)/(2+\rho)`.
 
-Whether runs determine a quantity follows from their information matrix alone: closed loops leave all three free to scale
+Whether runs determine a quantity follows from their information matrix alone: closed loops leave all three free to
+scale
 together, a straight says nothing on the width. A quantity counts as observed when its data-only standard uncertainty
 is at most a third of its tolerance.
 """
@@ -52,6 +53,8 @@ def observed(standard_uncertainty: Float, tolerance: Float) -> Bool:
 
 
 def deviation(parameters: Float, reference: Float) -> Float:
-    """Relative deviation (3,) of the quantities from a reference set: tick factor and width relative, side ratio as a difference."""
+    """Relative deviation (3,) of the quantities from a reference set: tick factor and width relative, side ratio as a
+    difference.
+    """
     difference = to_quantities(parameters) - to_quantities(reference)
     return np.array([np.expm1(difference[0]), difference[1], np.expm1(difference[2])])

@@ -1,13 +1,15 @@
 r"""Covariance of the end pose from noise in the rolling of each side.
 
-Each side's error variance grows with the distance it rolls, :math:`\sigma^2 = q\,|l|` (Chong and Kleeman 1997). An error in
+Each side's error variance grows with the distance it rolls, :math:`\sigma^2 = q\,|l|` (Chong and Kleeman 1997). An
+error in
 the left side at a point of the path moves the end by half of it along the heading there and turns the rest of the path
 by :math:`-1/W` of it:
 
 .. math:: g_L = \left(\tfrac12\cos\varphi + \tfrac{Y}{W},\ \tfrac12\sin\varphi - \tfrac{X}{W},\ -\tfrac1W\right)
 
 with (X, Y) the way still to go; on the right side the signs of the turned parts change. The covariance for q = 1 is
-:math:`N = \int |dl|\,g_L g_L^T + |dr|\,g_R g_R^T`, taken with two Gauss points per sample so that it does not depend on how
+:math:`N = \int |dl|\,g_L g_L^T + |dr|\,g_R g_R^T`, taken with two Gauss points per sample so that it does not depend
+on how
 the samples are cut (exact on a straight of one sample).
 
 References
@@ -51,6 +53,8 @@ def noise_covariance(left_ticks: Float, right_ticks: Float, parameters: Float) -
         to_go_y = (end[1] - start[:, 1] - step * np.sin(middle)) / width
         half_cosine, half_sine = 0.5 * np.cos(heading), 0.5 * np.sin(heading)
         for rolled, sign in ((left, 1.0), (right, -1.0)):
-            g = np.stack([half_cosine + sign * to_go_y, half_sine - sign * to_go_x, np.full(heading.size, -sign / width)])
+            g = np.stack(
+                [half_cosine + sign * to_go_y, half_sine - sign * to_go_x, np.full(heading.size, -sign / width)]
+            )
             result += (g * (0.5 * np.abs(rolled))) @ g.T
     return result

@@ -1,6 +1,7 @@
 r"""A first guess of the parameters from runs, when the ruler's width may be wrong by 10 to 80 % and headings wrap.
 
-Runs that hardly turn give the scale; then every width on a grid fine enough that no heading can slip a full turn between
+Runs that hardly turn give the scale; then every width on a grid fine enough that no heading can slip a full turn
+between
 neighbours is tried, with the side ratio that the straight runs ask for at that width. The best few are refined by
 the fit itself on thinned counts, and the one with the smallest deviance is the start.
 
@@ -54,9 +55,7 @@ def find_start(counts: Sequence[tuple[Float, Float]], levers_m: Float, closures:
     widths = nominal[2] * np.geomspace(*_WIDTH_RANGE, count)
     candidates = np.array([_with_side_ratio(scaled, width, totals, closures) for width in widths])
     costs = np.array([_rough_cost(stack, closures, item, rolled * scaled[0]) for item in candidates])
-    lowest = np.flatnonzero(
-        (costs <= np.r_[np.inf, costs[:-1]]) & (costs <= np.r_[costs[1:], np.inf])
-    )
+    lowest = np.flatnonzero((costs <= np.r_[np.inf, costs[:-1]]) & (costs <= np.r_[costs[1:], np.inf]))
     best = lowest[np.argsort(costs[lowest])][:_CANDIDATES]
     fits = [fit(stack, closures, candidates[index]) for index in best]
     return min(fits, key=lambda item: item.deviance).parameters
