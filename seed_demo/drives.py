@@ -195,12 +195,12 @@ def drive(plan: RunPlan) -> DrivenRun:
     rng = np.random.default_rng(plan.seed)
     make = plan.vehicle.make
     truth = plan.vehicle.truth(plan.share)
-    left, right, width = 1.0 + rng.normal(0.0, (make.side_spread, make.side_spread, make.width_spread))
+    scale, ratio, width = rng.normal(0.0, (make.scale_spread, make.ratio_spread, make.width_spread))
     today = replace(
         truth,
-        left_m_per_tick=truth.left_m_per_tick * left,
-        right_m_per_tick=truth.right_m_per_tick * right,
-        width_m=truth.width_m * width,
+        left_m_per_tick=truth.left_m_per_tick * (1.0 + scale - ratio / 2),
+        right_m_per_tick=truth.right_m_per_tick * (1.0 + scale + ratio / 2),
+        width_m=truth.width_m * (1.0 + width),
     )
     motion = move(plan.course, today, make.measuring_speed_m_per_s, rng, (plan.slip,) if plan.slip else ())
     written = log(motion, Logger(make.log_rate_hz, make.lateness_steps, plan.vehicle.counter_bits), rng)

@@ -23,7 +23,10 @@ Diet = Literal["mixed", "squares"]
 
 @dataclass(frozen=True)
 class Make:
-    """What vehicles of one make share. ``ruler_*`` is what ruler and drawing say, the other figures are true."""
+    """What vehicles of one make share. ``ruler_*`` is what ruler and drawing say, the other figures are true.
+
+    ``*_spread``: standard deviations, relative, by which load, surface and warmth move the truth from run to run.
+    """
 
     word: str
     drive: Drive
@@ -32,7 +35,8 @@ class Make:
     m_per_tick: float
     width_m: float
     noise_m2_per_m: float
-    side_spread: float
+    scale_spread: float
+    ratio_spread: float
     width_spread: float
     measuring_speed_m_per_s: float
     max_speed_m_per_s: float
