@@ -1,4 +1,6 @@
-"""Refusals, as classes that know nothing of HTTP. One table in the API room maps each class to a status and a problem type."""
+"""Refusals, as classes that know nothing of HTTP. One table in the API room maps each class to a status and a problem
+type.
+"""
 
 from __future__ import annotations
 

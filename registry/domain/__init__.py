@@ -1,1 +1,3 @@
-"""The trade's nouns and rules: frozen values that know nothing of tables, HTTP or the clock (times come in as arguments)."""
+"""The trade's nouns and rules: frozen values that know nothing of tables, HTTP or the clock (times come in as
+arguments).
+"""

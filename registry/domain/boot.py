@@ -24,7 +24,9 @@ class BootStatement:
 
 @dataclass(frozen=True)
 class Boot:
-    """A boot on the record. ``calibration_id`` is what number or digest resolved to; ``matched`` whether that was in force."""
+    """A boot on the record. ``calibration_id`` is what number or digest resolved to; ``matched`` whether that was in
+    force.
+    """
 
     boot_id: str
     vehicle_id: str

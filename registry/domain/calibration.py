@@ -63,7 +63,10 @@ class CalibrationResult:
 
 @dataclass(frozen=True)
 class Calibration:
-    """A calibration on the record. ``based_on`` is the calibration in force when it was proposed."""
+    """A calibration on the record. ``based_on`` is the calibration in force when it was proposed.
+
+    ``reinstates`` names, for kind ``reinstated``, the calibration whose numbers it carries (the first in a chain).
+    """
 
     calibration_id: str
     vehicle_id: str
@@ -75,11 +78,14 @@ class Calibration:
     in_force_to: datetime | None
     recorded_at: datetime
     recorded_by: str
+    reinstates: str | None = None
 
 
 @dataclass(frozen=True)
 class InForce:
-    """One entry in the history of what a vehicle should drive on. ``calibration_id`` None: nothing in force from then on."""
+    """One entry in the history of what a vehicle should drive on. ``calibration_id`` None: nothing in force from then
+    on.
+    """
 
     sequence: int
     vehicle_id: str

@@ -1,12 +1,14 @@
 """What a deviation does on the floor, in the words people use there.
 
-A *deviation* is always the true parameter relative to the one the vehicle drives on, minus one. The vehicle counts ticks and
-believes its parameters, so:
+A *deviation* is always the true parameter relative to the one the vehicle drives on, minus one. The vehicle counts
+ticks and believes its parameters, so:
 
 * true tick factor larger: every tick rolls further than believed. Told to drive 10 m, it *overshoots*.
-* true side ratio larger: the right side rolls further than believed. Told to drive straight it turns counter-clockwise: it
-  *pulls left*. Over a distance D the heading changes by ``eps D / W`` and the vehicle ends ``eps D² / (2 W)`` to the side.
-* true effective width larger: the same difference of the sides turns the vehicle less. Told to make a full turn, it *turns short*.
+* true side ratio larger: the right side rolls further than believed. Told to drive straight it turns
+  counter-clockwise: it *pulls left*. Over a distance D the heading changes by ``eps D / W`` and the vehicle ends
+  ``eps D² / (2 W)`` to the side.
+* true effective width larger: the same difference of the sides turns the vehicle less. Told to make a full turn, it
+  *turns short*.
 
 Headings counter-clockwise positive, x ahead, y to the left.
 """
@@ -63,7 +65,8 @@ def tick_factor_words(deviation: float) -> str:
 def side_ratio_words(deviation: float, width_m: float) -> str:
     """Consequence of a deviation of the side ratio for a vehicle ``width_m`` wide: ``pulls left 115 mm in 10 m``.
 
-    A vehicle that turns by more than a radian over the stretch no longer has a side offset worth naming: then the turn is said.
+    A vehicle that turns by more than a radian over the stretch no longer has a side offset worth naming: then the turn
+    is said.
     """
     heading_rad = heading_error_rad(deviation, width_m)
     error_m = side_error_m(deviation, width_m)
@@ -91,7 +94,8 @@ def consequence(quantity: Quantity, deviation: float, width_m: float) -> str:
     quantity
         Which of the three watched quantities deviates.
     deviation
-        True value relative to what the vehicle drives on, minus one. For the side ratio: ``(1 + true) / (1 + believed) - 1``.
+        True value relative to what the vehicle drives on, minus one. For the side ratio:
+        ``(1 + true) / (1 + believed) - 1``.
     width_m
         Effective width of the vehicle in metres.
     """

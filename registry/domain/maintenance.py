@@ -22,9 +22,11 @@ Side = Literal["left", "right", "both"]
 
 MAINTENANCE_KINDS: tuple[MaintenanceKind, ...] = get_args(MaintenanceKind)
 
-#: Runs before new tracks, tyres, encoders or geometry say nothing about the vehicle after. Pressure and tension move the
+#: Runs before new tracks, tyres, encoders or geometry say nothing about the vehicle after. Pressure and tension move
+#: the
 #: effective rolling radius and the slip by more than a tolerance (practice figures: 0.1 to 0.5 %), so they end it too.
-#: Towing turns counters without moving the parameters; a controller only carries numbers; `other` is judged by a person.
+#: Towing turns counters without moving the parameters; a controller only carries numbers; `other` is judged by a
+#: person.
 ENDS_WINDOW: dict[MaintenanceKind, bool] = {
     "part_fitted": True,
     "sides_exchanged": True,

@@ -40,7 +40,8 @@ def _of_alert(alert: Alert) -> NextStep:
 
 def _of_proposal(proposal: Calibration) -> NextStep:
     sentence = f"Decide on calibration {proposal.number}: put it into force or withdraw it."
-    return NextStep("this week", sentence, "It is proposed and waits for an approver.", "proposal", proposal.calibration_id)
+    why = "It is proposed and waits for an approver."
+    return NextStep("this week", sentence, why, "proposal", proposal.calibration_id)
 
 
 def next_step(

@@ -28,7 +28,9 @@ class Actor:
     role: Role | None = None
 
     def may(self, role: Role) -> bool:
-        """Whether this actor may do what ``role`` may do. The local account holds the files; it may act (and is named)."""
+        """Whether this actor may do what ``role`` may do. The local account holds the files; it may act (and is
+        named).
+        """
         if self.kind == "local":
             return True
         return self.role is not None and ROLES.index(self.role) >= ROLES.index(role)

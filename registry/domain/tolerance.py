@@ -1,4 +1,6 @@
-"""How far each watched quantity may move from the calibration in force before the vehicle is called out of tolerance."""
+"""How far each watched quantity may move from the calibration in force before the vehicle is called out of
+tolerance.
+"""
 
 from __future__ import annotations
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import json
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, field
 from datetime import datetime
 from typing import Literal
 
@@ -53,8 +53,8 @@ class VehicleStatement:
     site: str | None = None
     serial: str | None = None
     counter_bits: int = 32
-    reference_point: ReferencePoint = ReferencePoint()
-    tolerance: Tolerance = Tolerance()
+    reference_point: ReferencePoint = field(default_factory=ReferencePoint)
+    tolerance: Tolerance = field(default_factory=Tolerance)
 
     def etag(self) -> str:
         """Identity of the content: equal statements answer the same tag."""

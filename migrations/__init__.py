@@ -1,0 +1,1 @@
+"""The schema's history: linear, numbered revisions of one idea each, every constraint named."""

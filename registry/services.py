@@ -1,0 +1,40 @@
+"""Chooses what is real: the clock, the identities and the database behind the two kinds of transaction."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from contextlib import AbstractContextManager
+from dataclasses import dataclass
+from datetime import datetime
+from functools import partial
+
+from registry import clock
+from registry.settings import Settings
+from registry.storage.engine import Connection, make_engine, reading, writing
+
+
+@dataclass(frozen=True)
+class Services:
+    """What every procedure is handed.
+
+    ``read`` and ``write`` answer a transaction to be used in a ``with``; ``write`` commits at its end and rolls back on
+    an exception. There is one writer at a time, so what a writer has read still holds when it writes.
+    """
+
+    settings: Settings
+    now: Callable[[], datetime]
+    new_id: Callable[[], str]
+    read: Callable[[], AbstractContextManager[Connection]]
+    write: Callable[[], AbstractContextManager[Connection]]
+
+
+def make_services(settings: Settings) -> Services:
+    """The real services of an installation. Opens no connection: the first transaction does."""
+    engine = make_engine(settings.database_url)
+    return Services(
+        settings=settings,
+        now=clock.now,
+        new_id=clock.new_id,
+        read=partial(reading, engine),
+        write=partial(writing, engine),
+    )

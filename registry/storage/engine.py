@@ -1,0 +1,100 @@
+"""The database behind a URL, and the two kinds of transaction: many readers, one writer at a time.
+
+SQLite's driver is kept out of transaction control (``isolation_level=None``): by itself it begins late, so that a
+transaction that reads first and writes later fails at once as "locked" whatever the time-out, or loses an update. Here
+a writer takes the write lock before it reads anything (``BEGIN IMMEDIATE``). On PostgreSQL a writer takes one advisory
+lock first, so that both databases give the same promise.
+"""
+
+from __future__ import annotations
+
+import sqlite3
+import threading
+from collections.abc import Iterator
+from contextlib import contextmanager
+from typing import Any
+
+from sqlalchemy import Connection, Engine, create_engine, event
+from sqlalchemy.exc import OperationalError
+
+from registry.errors import Unready
+
+__all__ = ["Connection", "Engine", "make_engine", "reading", "writing"]
+
+#: A writer waits this long for the one before it. Writes last milliseconds; a bulk load may hold the lock for seconds.
+BUSY_TIMEOUT_S = 30
+_WRITER_LOCK = 0x726F6C6C
+
+_writing_in = threading.local()
+
+
+def make_engine(url: str) -> Engine:
+    """An engine for SQLite or PostgreSQL. Opens no connection.
+
+    Raises
+    ------
+    ValueError
+        For an in-memory SQLite database, which would be another one in every thread.
+    """
+    if url.startswith("sqlite"):
+        engine = create_engine(url, connect_args={"isolation_level": None, "timeout": BUSY_TIMEOUT_S}, max_overflow=30)
+        if engine.url.database in (None, "", ":memory:"):
+            raise ValueError("an in-memory database is another one in every thread: name a file")
+        event.listen(engine, "connect", _prepare_sqlite)
+        return engine
+    return create_engine(url, max_overflow=30, pool_pre_ping=True)
+
+
+def _prepare_sqlite(connection: sqlite3.Connection, _record: Any) -> None:
+    """Pragmas hold for one connection and must come before its first transaction."""
+    cursor = connection.cursor()
+    for pragma in ("journal_mode=WAL", "synchronous=FULL", "foreign_keys=ON", "cache_size=-16000", "temp_store=MEMORY"):
+        cursor.execute(f"PRAGMA {pragma}")
+    cursor.close()
+
+
+@contextmanager
+def reading(engine: Engine) -> Iterator[Connection]:
+    """A transaction that sees one state of the record throughout."""
+    with engine.connect() as c, c.begin() as transaction:
+        if c.dialect.name == "sqlite":
+            c.exec_driver_sql("BEGIN")
+        else:
+            c.exec_driver_sql("SET TRANSACTION ISOLATION LEVEL REPEATABLE READ READ ONLY")
+        yield c
+        transaction.rollback()
+
+
+@contextmanager
+def writing(engine: Engine) -> Iterator[Connection]:
+    """The one writing transaction: commits at the end of the ``with``, rolls back on an exception.
+
+    Raises
+    ------
+    RuntimeError
+        When this thread is already writing: it would wait for itself.
+    Unready
+        When another process has held the write lock for too long.
+    """
+    held: set[int] = _writing_in.__dict__.setdefault("engines", set())
+    if id(engine) in held:
+        raise RuntimeError("a writing transaction was begun inside another one of the same thread")
+    held.add(id(engine))
+    try:
+        with engine.connect() as c, c.begin():
+            _take_write_lock(c)
+            yield c
+    finally:
+        held.discard(id(engine))
+
+
+def _take_write_lock(c: Connection) -> None:
+    if c.dialect.name != "sqlite":
+        c.exec_driver_sql(f"SELECT pg_advisory_xact_lock({_WRITER_LOCK})")
+        return
+    try:
+        c.exec_driver_sql("BEGIN IMMEDIATE")
+    except OperationalError as error:
+        if "locked" in str(error.orig):
+            raise Unready(f"another process has been writing for {BUSY_TIMEOUT_S} seconds: try again") from error
+        raise
