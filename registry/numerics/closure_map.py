@@ -267,7 +267,7 @@ class CountsStack:
         self.counts = list(counts)
         self.levers_m = np.asarray(levers_m, dtype=np.float64).reshape(len(self.counts), 2)
 
-    def inside(self, parameters: Float) -> Bool:
+    def inside(self, parameters: Float) -> Bool:  # noqa: ARG002 - the signature of a stack
         """Always: integration has no box."""
         return np.ones(len(self.counts), dtype=np.bool_)
 

@@ -233,7 +233,7 @@ def _whiten(linear: _Linear, state: _State) -> tuple[Float, Float]:
     covariance = linear.own + state.rolling * linear.noise
     if state.spread > 0.0:
         covariance = covariance + state.spread * linear.spread
-    inverse = np.linalg.inv(covariance)
+    inverse = np.asarray(np.linalg.inv(covariance), dtype=np.float64)
     return inverse, np.asarray(np.einsum("ni,nij,nj->n", linear.e, inverse, linear.e))
 
 
