@@ -11,7 +11,7 @@ from __future__ import annotations
 import math
 from typing import Literal
 
-from scipy.special import ndtr
+from scipy.special import ndtr, stdtr
 
 Decision = Literal["within", "uncertain", "beyond"]
 
@@ -20,8 +20,17 @@ WATCH_AT = 0.50
 CLEAR_AT = 0.20
 
 
-def probability_beyond(value: float, u: float, lower: float, upper: float) -> float:
+def probability_beyond(value: float, u: float, lower: float, upper: float, degrees: float = math.inf) -> float:
     """Probability that the true value is outside [lower, upper].
+
+    Parameters
+    ----------
+    value, u : float
+        Estimate and standard uncertainty.
+    lower, upper : float
+        Limits of the tolerance interval; either may be infinite.
+    degrees : float
+        Degrees of freedom behind u: Student's distribution for few of them, the normal for many.
 
     Raises
     ------
@@ -33,9 +42,13 @@ def probability_beyond(value: float, u: float, lower: float, upper: float) -> fl
     if not upper > lower:
         raise ValueError("the tolerance interval is empty")
     # Two tails, not one minus the middle: the difference of two numbers near one would lose the small probabilities.
-    below = 0.0 if math.isinf(lower) else float(ndtr((lower - value) / u))
-    above = 0.0 if math.isinf(upper) else float(ndtr((value - upper) / u))
+    below = 0.0 if math.isinf(lower) else _lower_tail((lower - value) / u, degrees)
+    above = 0.0 if math.isinf(upper) else _lower_tail((value - upper) / u, degrees)
     return min(1.0, below + above)
+
+
+def _lower_tail(score: float, degrees: float) -> float:
+    return float(ndtr(score)) if math.isinf(degrees) else float(stdtr(degrees, score))
 
 
 def decide(probability: float, before: Decision | None = None) -> Decision:
