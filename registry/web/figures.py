@@ -1,4 +1,4 @@
-"""How numbers and times are written on pages: millimetres, degrees, percent, two significant digits of an uncertainty, UTC."""
+"""How numbers and times are written on pages: mm, degrees, percent, two significant digits of an uncertainty, UTC."""
 
 from __future__ import annotations
 

@@ -1,9 +1,9 @@
 """The tolerance strip: one watched quantity as a gauge between two jaws.
 
-The jaws stand at the tolerance, the line between them is the calibration in force, the mark is what the recent runs say, with
-its 95 % whisker, and the trail below it is what earlier evaluations said, the newest uppermost. The form of the mark says the
-state as well as its place does: a disc within, a lozenge where it is uncertain, an arrow-head pointing outwards beyond, and an
-empty gauge where these runs cannot tell.
+The jaws stand at the tolerance, the line between them is the calibration in force, the mark is what the recent runs
+say, with its 95 % whisker, and the trail below it is what earlier evaluations said, the newest uppermost. The form of
+the mark says the state as well as its place does: a disc within, a lozenge where it is uncertain, an arrow-head
+pointing outwards beyond, and an empty gauge where these runs cannot tell.
 
 Everything here is geometry and words; the template writes them as SVG. Coordinates are those of a 240 by 48 view box.
 """
@@ -105,7 +105,7 @@ def place(deviation: float, tolerance: float) -> tuple[float, bool]:
 
 
 def trail_of(deviations: Sequence[float | None], tolerance: float) -> tuple[tuple[float, float], ...]:
-    """Earlier deviations as points below the estimate, newest first; those that could not be told leave their place empty."""
+    """Earlier deviations as points below the estimate, newest first; what could not be told leaves its place empty."""
     step = (TRAIL_BOTTOM - TRAIL_TOP) / (TRAIL_LENGTH - 1)
     return tuple(
         (place(deviation, tolerance)[0], round(TRAIL_TOP + step * row, 2))
@@ -134,7 +134,7 @@ def make_strip(gauge: Gauge, finding: QuantityFinding | None, earlier: Sequence[
     finding
         What the latest evaluation says; None before the first.
     earlier
-        Deviations of earlier evaluations against the same calibration, newest first, None where those runs could not tell.
+        Deviations of earlier evaluations against the same calibration, newest first, None where those could not tell.
     """
     state = state_of(finding)
     label = QUANTITY_WORDS[gauge.quantity]

@@ -22,7 +22,8 @@ def drive(left_rolled_m: float, right_rolled_m: float, width_m: float) -> tuple[
 def test_a_right_side_that_rolls_further_than_believed_pulls_the_vehicle_left() -> None:
     width_m, deviation = 0.65, 0.0015
     _, left_m, turn_rad = drive(10.0 * (1 - deviation / 2), 10.0 * (1 + deviation / 2), width_m)
-    assert left_m > 0.0 and turn_rad > 0.0
+    assert left_m > 0.0
+    assert turn_rad > 0.0
     assert consequence.side_ratio_words(deviation, width_m) == "pulls left 115 mm in 10 m"
     # The words use the small-turn form; the third-order term of the arc is h²/12 of it, here 4e-5.
     assert consequence.side_error_m(deviation, width_m) == pytest.approx(left_m, rel=1e-4)

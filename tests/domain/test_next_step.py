@@ -17,7 +17,13 @@ ALERT = Alert(
     "a1",
     "v1",
     AlertContent(
-        "beyond_tolerance", "width", "Effective width is beyond.", "turns short", "Check the tracks.", "medium", "this shift"
+        "beyond_tolerance",
+        "width",
+        "Effective width is beyond.",
+        "turns short",
+        "Check the tracks.",
+        "medium",
+        "this shift",
     ),
     "unacknowledged",
     AT,
@@ -29,7 +35,10 @@ PROPOSAL = Calibration(
     "v1",
     4,
     CalibrationResult(
-        "evaluation", Parameters(1e-4, 1e-4, 0.5), ((1e-8, 0, 0), (0, 1e-8, 0), (0, 0, 1e-8)), Observed(True, True, True)
+        "evaluation",
+        Parameters(1e-4, 1e-4, 0.5),
+        ((1e-8, 0, 0), (0, 1e-8, 0), (0, 0, 1e-8)),
+        Observed(True, True, True),
     ),
     "proposed",
     None,
@@ -62,7 +71,8 @@ def test_the_most_urgent_alert_speaks_before_a_proposal_and_the_advice_is_the_se
 
 def test_an_alert_that_no_longer_holds_asks_only_for_acknowledgement() -> None:
     step = next_step((replace(ALERT, standing="returned"),), (), True, None)
-    assert step.act_within == "this week" and step.sentence.startswith("Acknowledge")
+    assert step.act_within == "this week"
+    assert step.sentence.startswith("Acknowledge")
 
 
 def test_a_shelved_alert_asks_for_nothing() -> None:
@@ -72,4 +82,5 @@ def test_a_shelved_alert_asks_for_nothing() -> None:
 def test_maintenance_that_awaits_a_calibration_asks_for_runs_and_names_the_work() -> None:
     step = next_step((), (PROPOSAL,), True, WORK)
     assert step.leads_to == "baseline"
-    assert "2031-05-04" in step.why and "new track, tyre or wheel fitted" in step.why
+    assert "2031-05-04" in step.why
+    assert "new track, tyre or wheel fitted" in step.why

@@ -1,0 +1,28 @@
+"""What a page needs of its application: the services, and who is signed in."""
+
+from __future__ import annotations
+
+from flask import current_app
+from flask_login import current_user
+
+from registry.domain.person import Actor, Person
+from registry.services import Services
+
+EXTENSION = "rollbook.web"
+
+
+def services() -> Services:
+    """The services of the running application."""
+    running: Services = current_app.extensions[EXTENSION]
+    return running
+
+
+def person() -> Person | None:
+    """The person who is signed in, if anyone is."""
+    return current_user.person if current_user.is_authenticated else None
+
+
+def actor() -> Actor:
+    """The signed-in person as the one who acts. The guard before every page has seen to it that there is one."""
+    signed_in: Person = current_user.person
+    return Actor("person", signed_in.name, signed_in.role)
