@@ -34,10 +34,18 @@ def latest(c: Connection, vehicle_id: str, until: datetime | None = None) -> Eva
 
 def latest_all(c: Connection) -> dict[str, Evaluation]:
     """The evaluation of the latest ``as_of`` of every vehicle that has one."""
+    return {vehicle_id: newest[0] for vehicle_id, newest in recent_all(c, 1).items()}
+
+
+def recent_all(c: Connection, each: int) -> dict[str, list[Evaluation]]:
+    """The last ``each`` evaluations of every vehicle that has one, newest first, in one query."""
     place = func.row_number().over(partition_by=evaluations.c.vehicle_id, order_by=_NEWEST_FIRST).label("place")
     ranked = select(evaluations.c.sequence, place).subquery()
-    statement = select(evaluations).join(ranked, ranked.c.sequence == evaluations.c.sequence).where(ranked.c.place == 1)
-    return {row.vehicle_id: _evaluation(row) for row in c.execute(statement)}
+    statement = select(evaluations).join(ranked, ranked.c.sequence == evaluations.c.sequence)
+    recent: dict[str, list[Evaluation]] = {}
+    for row in c.execute(statement.where(ranked.c.place <= each).order_by(evaluations.c.vehicle_id, ranked.c.place)):
+        recent.setdefault(row.vehicle_id, []).append(_evaluation(row))
+    return recent
 
 
 def page(c: Connection, vehicle_id: str, limit: int, after: str | None) -> Page[Evaluation]:
