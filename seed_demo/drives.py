@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass, replace
-from math import hypot, pi, radians, tau
+from math import hypot, pi, radians
 from typing import Literal
 
 import numpy as np
@@ -17,6 +17,7 @@ from seed_demo.simulator import FloatArray, IntArray, Log, Logger, Slip, log, ma
 #: What tape and protractor are good for, as the drivers state it and as the world scatters their readings.
 POSITION_SD_M = 0.005
 HEADING_SD_RAD = radians(0.25)
+_TWENTIETH_RAD = radians(0.05)
 
 Reading = Literal["pose", "point", "distance", "turns"]
 
@@ -80,13 +81,17 @@ def arrival_day(vehicle: Vehicle, days: int, place: int) -> int:
     return place // 3 if vehicle.story.arrives == 0.0 else round(vehicle.story.arrives * days)
 
 
+def last_run_day(vehicle: Vehicle, days: int) -> int:
+    """Day of the last run. A vehicle laid up has been silent for longer than the time after which that is an alert."""
+    return days if vehicle.story.last_run >= 1.0 else min(round(vehicle.story.last_run * days), days - 38)
+
+
 def plans(vehicle: Vehicle, days: int, place: int) -> Iterator[RunPlan]:
     """All runs of one vehicle in order of time: its calibration sessions, and three runs a week on two days."""
     rng = np.random.default_rng([vehicle.seed, 1])
     sessions = session_days(vehicle, days, place)
     first = arrival_day(vehicle, days, place)
-    # A vehicle laid up must have been silent for longer than the time after which silence is an alert.
-    last = days if vehicle.story.last_run >= 1.0 else min(round(vehicle.story.last_run * days), days - 38)
+    last = last_run_day(vehicle, days)
     for day in range(first, days + 1):
         if day in sessions:
             yield from _session(vehicle, day, days, rng)
@@ -248,8 +253,7 @@ def read_end(
     """
     x, y = (float(v) for v in np.array(end[:2]) + rng.normal(0.0, position_sd_m, 2))
     total = end[2] + float(rng.normal(0.0, heading_sd_rad))
-    turns = round(total / tau)
-    heading = _to_twentieth_of_degree(total - tau * turns)
+    turns, heading = _turns_and_heading(total)
     if reading == "turns":
         return ClosureStatement(None, None, heading, None, turns, None, heading_sd_rad)
     if reading == "distance":
@@ -260,6 +264,8 @@ def read_end(
     )
 
 
-def _to_twentieth_of_degree(angle_rad: float) -> float:
-    rounded = round(angle_rad / radians(0.05)) * radians(0.05)
-    return rounded + tau if rounded <= -pi else rounded
+def _turns_and_heading(total_rad: float) -> tuple[int, float]:
+    """Whole turns and the rest in (-pi, pi], of a total turn read to a twentieth of a degree."""
+    twentieths = round(total_rad / _TWENTIETH_RAD)
+    turns = -((3600 - twentieths) // 7200)
+    return turns, min(pi, (twentieths - 7200 * turns) * _TWENTIETH_RAD)
