@@ -8,6 +8,7 @@ from typing import Any
 from sqlalchemy import Row, Select, func, insert, select
 
 from registry.domain.calibration import InForce
+from registry.domain.vehicle import Parameters
 from registry.storage.engine import Connection
 from registry.storage.tables import calibrations
 from registry.storage.tables import in_force as entries
@@ -74,6 +75,17 @@ def in_force_history(c: Connection, vehicle_id: str) -> list[InForce]:
     """All entries of a vehicle, oldest first."""
     statement = _ENTRIES.where(entries.c.vehicle_id == vehicle_id).order_by(entries.c.sequence)
     return [_entry(row) for row in c.execute(statement)]
+
+
+def parameters_in_force(c: Connection) -> dict[str, Parameters]:
+    """The values that each vehicle should drive on now, in one query; vehicles with nothing in force are left out."""
+    latest = select(func.max(entries.c.sequence)).group_by(entries.c.vehicle_id)
+    values = (calibrations.c.left_m_per_tick, calibrations.c.right_m_per_tick, calibrations.c.width_m)
+    statement = select(entries.c.vehicle_id, *values).join(
+        calibrations, calibrations.c.calibration_id == entries.c.calibration_id
+    )
+    rows = c.execute(statement.where(entries.c.sequence.in_(latest)))
+    return {row.vehicle_id: Parameters(row.left_m_per_tick, row.right_m_per_tick, row.width_m) for row in rows}
 
 
 def all_in_force(c: Connection) -> dict[str, InForce]:
