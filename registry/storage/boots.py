@@ -6,7 +6,7 @@ from collections.abc import Sequence
 from datetime import datetime
 from typing import Any
 
-from sqlalchemy import Row, bindparam, insert, select, true
+from sqlalchemy import Row, bindparam, func, insert, select, true
 
 from registry.domain.boot import Boot, BootSheet, BootStatement
 from registry.domain.person import KeyRecord
@@ -65,6 +65,14 @@ def latest(c: Connection, vehicle_id: str, until: datetime | None = None) -> Boo
         statement = statement.where(boots.c.booted_at <= until)
     row = c.execute(statement.order_by(*_NEWEST_FIRST).limit(1)).first()
     return None if row is None else _boot(row)
+
+
+def latest_all(c: Connection) -> dict[str, Boot]:
+    """The last boot of every vehicle that has reported one."""
+    place = func.row_number().over(partition_by=boots.c.vehicle_id, order_by=_NEWEST_FIRST).label("place")
+    ranked = select(boots.c.sequence, place).subquery()
+    statement = select(boots).join(ranked, ranked.c.sequence == boots.c.sequence).where(ranked.c.place == 1)
+    return {row.vehicle_id: _boot(row) for row in c.execute(statement)}
 
 
 def loaded_by(c: Connection, calibration_id: str) -> tuple[str, ...]:
