@@ -1,1 +1,1 @@
-"""Does what a person, a vehicle or the schedule asks, once for every door: authority, one transaction, one journal entry."""
+"""Does what a person, a vehicle or the schedule asks, once for every door: authority, transaction, journal."""

@@ -7,7 +7,7 @@ from dataclasses import asdict, fields, replace
 from datetime import datetime
 from typing import Any, Literal
 
-from sqlalchemy import Row, Select, and_, insert, select
+from sqlalchemy import Row, Select, insert, select
 
 from registry.domain.alert import Alert, AlertContent, AlertEvent, AlertKind, AlertStanding
 from registry.errors import NotFound
@@ -114,7 +114,7 @@ def page(
 
 
 def standing_at(
-    c: Connection, vehicle_id: str, kinds: Sequence[AlertKind], at: datetime, known_at: datetime
+    c: Connection, vehicle_id: str, kinds: Sequence[AlertKind], at: datetime | None, known_at: datetime | None
 ) -> list[Alert]:
     """A vehicle's alerts of some kinds as they stood at a time, as far as had been recorded by another.
 
@@ -123,12 +123,13 @@ def standing_at(
     statement = (
         select(alert_events, alerts.c.vehicle_id, alerts.c.raised_at)
         .join(alerts, alerts.c.alert_id == alert_events.c.alert_id)
-        .where(
-            and_(alerts.c.vehicle_id == vehicle_id, alerts.c.kind.in_(kinds)),
-            and_(alert_events.c.at <= at, alert_events.c.recorded_at <= known_at),
-        )
-        .order_by(alert_events.c.at, alert_events.c.sequence)
+        .where(alerts.c.vehicle_id == vehicle_id, alerts.c.kind.in_(kinds))
     )
+    if at is not None:
+        statement = statement.where(alert_events.c.at <= at)
+    if known_at is not None:
+        statement = statement.where(alert_events.c.recorded_at <= known_at)
+    statement = statement.order_by(alert_events.c.at, alert_events.c.sequence)
     stood: dict[str, Alert] = {}
     for row in c.execute(statement):
         before = stood.get(row.alert_id)

@@ -149,13 +149,17 @@ def open_proposals(c: Connection, vehicle_id: str, kind: Kind | None = None) -> 
     return _build(c, c.execute(statement.order_by(calibrations.c.number)).all())
 
 
-def withdrawn_numbers(c: Connection, vehicle_id: str) -> tuple[int, ...]:
-    """Numbers of a vehicle's withdrawn calibrations, ascending."""
-    statement = _CALIBRATIONS.where(
-        calibrations.c.vehicle_id == vehicle_id, calibration_standings.c.standing == "withdrawn"
+def withdrawn_numbers(c: Connection, vehicle_id: str, until: datetime | None = None) -> tuple[int, ...]:
+    """Numbers of a vehicle's calibrations that are withdrawn, or had been by ``until``, ascending."""
+    standings = calibration_standings
+    statement = (
+        select(calibrations.c.number)
+        .join(standings, standings.c.calibration_id == calibrations.c.calibration_id)
+        .where(calibrations.c.vehicle_id == vehicle_id, standings.c.standing == "withdrawn")
     )
-    numbers = c.scalars(statement.with_only_columns(calibrations.c.number).order_by(calibrations.c.number))
-    return tuple(numbers)
+    if until is not None:
+        statement = statement.where(standings.c.at <= until)
+    return tuple(c.scalars(statement.order_by(calibrations.c.number)))
 
 
 def first_run_at(c: Connection, calibration_id: str) -> datetime | None:

@@ -11,7 +11,8 @@ from __future__ import annotations
 import sqlite3
 import threading
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import closing, contextmanager
+from pathlib import Path
 from typing import Any
 
 from sqlalchemy import Connection, Engine, create_engine, event
@@ -98,3 +99,12 @@ def _take_write_lock(c: Connection) -> None:
         if "locked" in str(error.orig):
             raise Unready(f"another process has been writing for {BUSY_TIMEOUT_S} seconds: try again") from error
         raise
+
+
+def copy_sqlite(c: Connection, path: Path) -> None:
+    """Copy the whole database to a new file, consistent although it may be written to meanwhile."""
+    with closing(sqlite3.connect(path)) as target:
+        source = c.connection.driver_connection
+        if not isinstance(source, sqlite3.Connection):
+            raise TypeError("only a SQLite database can be copied so")
+        source.backup(target)

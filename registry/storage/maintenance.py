@@ -32,14 +32,15 @@ def all_for(c: Connection, vehicle_id: str) -> list[Maintenance]:
     return _entries(c.execute(statement.order_by(maintenance.c.done_at, maintenance.c.sequence)).all())
 
 
-def window_ends(c: Connection, vehicle_id: str, until: datetime, known_at: datetime) -> list[Maintenance]:
-    """A vehicle's work that ended a window, done by ``until`` and recorded by ``known_at``, oldest first."""
-    statement = select(maintenance).where(
-        maintenance.c.vehicle_id == vehicle_id,
-        maintenance.c.ends_window.is_(True),
-        maintenance.c.done_at <= until,
-        maintenance.c.recorded_at <= known_at,
-    )
+def window_ends(
+    c: Connection, vehicle_id: str, until: datetime | None = None, known_at: datetime | None = None
+) -> list[Maintenance]:
+    """A vehicle's work that ended a window, oldest first; done by ``until``, recorded by ``known_at`` if given."""
+    statement = select(maintenance).where(maintenance.c.vehicle_id == vehicle_id, maintenance.c.ends_window.is_(True))
+    if until is not None:
+        statement = statement.where(maintenance.c.done_at <= until)
+    if known_at is not None:
+        statement = statement.where(maintenance.c.recorded_at <= known_at)
     return _entries(c.execute(statement.order_by(maintenance.c.done_at, maintenance.c.sequence)).all())
 
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import asdict
 from datetime import datetime
 from typing import Any
@@ -181,12 +181,13 @@ def changes_mark(c: Connection, vehicle_id: str, until: datetime) -> str:
     return f"{number}-{last}"
 
 
-def all_digests(c: Connection) -> list[tuple[str, str, bytes]]:
-    """Identity, recorded digest and counts of every run, for the check of what is stored."""
+def all_digests(c: Connection) -> Iterator[tuple[str, str, bytes]]:
+    """Identity, recorded digest and counts of every run, a few at a time, for the check of what is stored."""
     statement = select(runs.c.run_id, runs.c.counts_digest, run_counts.c.counts).outerjoin(
         run_counts, run_counts.c.run_id == runs.c.run_id
     )
-    return [(row.run_id, row.counts_digest, row.counts or b"") for row in c.execute(statement)]
+    for row in c.execute(statement.execution_options(yield_per=100)):
+        yield row.run_id, row.counts_digest, row.counts or b""
 
 
 def _batches(items: list[str]) -> list[list[str]]:
