@@ -134,6 +134,16 @@ def take_run(services: Services, actor: Actor, vehicle_id: str, statement: RunSt
     return run, True
 
 
+def check_run(services: Services, actor: Actor, vehicle_id: str, statement: RunStatement) -> None:
+    """Refuse what `take_run` would refuse and record nothing: a manifest is checked whole before its first run is taken."""
+    authority.require_vehicle(actor, vehicle_id, "technician")
+    _check(statement, services.now())
+    with services.read() as c:
+        version = vehicle_store.at(c, vehicle_id, statement.started_at)
+        _known(c, vehicle_id, statement)
+    _check_range(statement, version.statement.counter_bits)
+
+
 def set_aside(services: Services, actor: Actor, run_id: str, reason: str) -> Run:
     """Take a run out of use, with a reason. A technician may set aside runs they recorded; others need an approver."""
     return _restate(services, actor, run_id, "set aside", reason)
