@@ -54,7 +54,9 @@ _BOUND_SCORE = 2.0
 _OUTLIER_SCORE = 3.5
 _STEP_LIMIT = 0.2
 _ITERATIONS = 60
-_BOUNDED_FIRST = 6
+_BOUNDED_FIRST = 5
+#: Settled: a step of a two-hundredth of the standard uncertainty, and the noise variance known to 1 %.
+_SETTLED_STEP, _SETTLED_NOISE = 5e-3, 1e-2
 
 Status = Literal["converged", "not converged", "outside maps"]
 
@@ -206,7 +208,7 @@ def fit(
         state.quantities = state.quantities + state.step
         moved = _update_noise(linear, inverse, weight, information, state, rolling_guess_m)
         sigma = np.sqrt(np.diag(np.linalg.inv(information)))
-        settled = bool(np.all(np.abs(state.step) <= 1e-3 * sigma + 1e-12)) and moved < 5e-3
+        settled = bool(np.all(np.abs(state.step) <= _SETTLED_STEP * sigma + 1e-12)) and moved < _SETTLED_NOISE
         if settled and iteration >= _BOUNDED_FIRST:
             if state.spread == 0.0 and _spread_wanted(linear, inverse, weight, information, state):
                 state.spread = 1e-8

@@ -40,13 +40,14 @@ from registry.procedures.baseline import (
     current_calibration,
     hold_from,
 )
-from registry.procedures.boot import refresh_sheet
+from registry.procedures.boot_sheets import refresh_sheet
 from registry.procedures.evidence import Evidence, parameter_array, parameters_of, refold
 from registry.services import Services
 from registry.storage import alerts as alert_store
 from registry.storage import boots as boot_store
 from registry.storage import calibrations as calibration_store
 from registry.storage import evaluations as evaluation_store
+from registry.storage import in_force as in_force_store
 from registry.storage import journal, leases
 from registry.storage import maintenance as maintenance_store
 from registry.storage import runs as run_store
@@ -122,7 +123,8 @@ def evaluate_vehicle(
             evaluation = _record(c, services, question, answer, as_of)
         _ask_for_silence(c, services, question.version, as_of)
         _ask_for_loading(c, services, question, as_of)
-        refresh_sheet(c, vehicle_id, services.now())
+        if evaluation is not None or question.last is None or _moved(question):
+            refresh_sheet(c, vehicle_id, services.now())
     return evaluation
 
 
@@ -158,9 +160,9 @@ def _evidence_end(c: Connection, calibration: Calibration) -> datetime:
     """Deviations are judged on runs after those that made the calibration; without runs, from when it came into
     force.
     """
-    if calibration.result.runs:
-        behind = run_store.by_ids(c, [one.run_id for one in calibration.result.runs])
-        return max(run.started_at for run in behind)
+    last = calibration_store.last_run_at(c, calibration.calibration_id)
+    if last is not None:
+        return last
     return calibration.in_force_from or calibration.recorded_at
 
 
@@ -268,7 +270,7 @@ def _proposal(
 
 def _same_ground(c: Connection, question: _Question, vehicle_id: str, as_of: datetime) -> bool:
     """Whether the calibration that the fit started from is still the one in force at that time."""
-    held = current_calibration(c, vehicle_id, as_of)
+    held = in_force_store.in_force(c, vehicle_id, as_of)
     return (
         held is not None and question.in_force is not None and held.calibration_id == question.in_force.calibration_id
     )
@@ -352,10 +354,15 @@ def _follow_alerts(
             alerting.clear(c, services, vehicle_id, cause, as_of, answer.result.message)
 
 
+def _moved(question: _Question) -> bool:
+    """Whether another calibration is in force than the one that the last evaluation was against."""
+    held = None if question.in_force is None else question.in_force.calibration_id
+    return question.last is not None and question.last.result.against != held
+
+
 def _clear_on_new_ground(c: Connection, services: Services, question: _Question, as_of: datetime) -> None:
     """What an evaluation said against another calibration than the one in force no longer holds."""
-    held = None if question.in_force is None else question.in_force.calibration_id
-    if question.last is not None and question.last.result.against != held:
+    if _moved(question):
         alerting.clear_deviations(c, services, question.version.vehicle_id, as_of, "another calibration is in force")
 
 

@@ -172,6 +172,16 @@ def first_run_at(c: Connection, calibration_id: str) -> datetime | None:
     return started_at
 
 
+def last_run_at(c: Connection, calibration_id: str) -> datetime | None:
+    """When the latest run behind a calibration started; None for one that rests on no runs."""
+    started_at: datetime | None = c.scalar(
+        select(func.max(runs.c.started_at, type_=runs.c.started_at.type))
+        .join(calibration_runs, calibration_runs.c.run_id == runs.c.run_id)
+        .where(calibration_runs.c.calibration_id == calibration_id)
+    )
+    return started_at
+
+
 def _build(c: Connection, rows: Sequence[Row[Any]]) -> list[Calibration]:
     """Calibrations with their runs and their times in force, three queries however many they are."""
     ids = [row.calibration_id for row in rows]
