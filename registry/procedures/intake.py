@@ -135,7 +135,7 @@ def take_run(services: Services, actor: Actor, vehicle_id: str, statement: RunSt
 
 
 def check_run(services: Services, actor: Actor, vehicle_id: str, statement: RunStatement) -> None:
-    """Refuse what `take_run` would refuse and record nothing: a manifest is checked whole before its first run is taken."""
+    """Refuse what `take_run` would refuse, recording nothing: a whole manifest is checked before a run is taken."""
     authority.require_vehicle(actor, vehicle_id, "technician")
     _check(statement, services.now())
     with services.read() as c:
