@@ -66,7 +66,7 @@ def report_boot(services: Services, actor: Actor, vehicle_id: str, statement: Bo
         )
         boots.add(c, boot)
         if last is None or booted_at >= last.booted_at:
-            _raise_or_clear(c, services, boot, loaded)
+            _raise_or_clear(c, services, boot, loaded, now)
         journal.write(c, now, str(actor), "boot", vehicle_id, _told(boot, loaded))
     return boot
 
@@ -131,10 +131,10 @@ def _not_in_force(c: Connection, calibration: Calibration, booted_at: datetime) 
     return f"calibration {number}, which had been superseded more than a day before"
 
 
-def _raise_or_clear(c: Connection, services: Services, boot: Boot, loaded: _Loaded) -> None:
+def _raise_or_clear(c: Connection, services: Services, boot: Boot, loaded: _Loaded, now: datetime) -> None:
     if loaded.wrong is None:
         note = "the vehicle booted on what is in force"
-        alerting.clear(c, services, boot.vehicle_id, "boot_mismatch", boot.booted_at, note)
+        alerting.clear(c, services, boot.vehicle_id, "boot_mismatch", now, note)
         return
     entry = calibrations.in_force(c, boot.vehicle_id)
     due = None if entry is None or entry.calibration_id is None else calibrations.by_id(c, entry.calibration_id)
@@ -150,7 +150,7 @@ def _raise_or_clear(c: Connection, services: Services, boot: Boot, loaded: _Load
         act_within="before it drives",
         onset_at=boot.booted_at,
     )
-    alerting.raise_or_update(c, services, boot.vehicle_id, content, boot.booted_at)
+    alerting.raise_or_update(c, services, boot.vehicle_id, content, now)
 
 
 def _consequence(loaded: Calibration | None, due: Calibration | None) -> str:

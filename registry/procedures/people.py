@@ -39,7 +39,7 @@ def add_person(services: Services, actor: Actor, name: str, role: Role, password
         now = services.now()
         person = Person(name, role, hashed, now)
         people.add(c, person)
-        journal.write(c, now, str(actor), "person_added", None, {"name": name, "role": role})
+        journal.write(c, now, str(actor), "person added", None, {"name": name, "role": role})
     return person
 
 
@@ -86,7 +86,7 @@ def issue_key(services: Services, actor: Actor, *, person: str | None = None, ve
         )
         people.add_key(c, record)
         what = {"key_id": record.key_id, "person": person}
-        journal.write(c, now, str(actor), "key_issued", vehicle_id, what)
+        journal.write(c, now, str(actor), "key issued", vehicle_id, what)
     return key
 
 

@@ -59,7 +59,7 @@ def put_vehicle(
             )
         now = services.now()
         made = vehicles.add_version(c, vehicle_id, statement, now, str(actor))
-        action = "vehicle_registered" if known is None else "vehicle_changed"
+        action = "vehicle registered" if known is None else "vehicle changed"
         what = {"version": made.version, **asdict(statement)}
         journal.write(c, now, str(actor), action, vehicle_id, what)
         refresh_sheet(c, vehicle_id, now)

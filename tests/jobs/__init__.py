@@ -1,0 +1,1 @@
+"""Tests of the schedule and of the lease that says which process works."""
