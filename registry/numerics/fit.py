@@ -396,6 +396,28 @@ def _influence(linear: _Linear, inverse: Float, weight: Float, information: Floa
     return result
 
 
+def scores_against(
+    stack: Stack, closures: Closures, parameters: Float, covariance: Float, rolling_noise_m: float
+) -> Float:
+    """Normal score (n,) of each run's distance from parameters known with a covariance: standard normal while they
+    hold.
+
+    Parameters
+    ----------
+    parameters : (3,) float
+        (k_L, k_R, W) in metres.
+    covariance : (3, 3) float
+        Of (ln tick factor, side ratio, ln width).
+    rolling_noise_m : float
+        Square metres per metre.
+    """
+    linear = _linearise(stack, closures, to_quantities(parameters))
+    known = linear.j @ covariance @ linear.j.transpose(0, 2, 1)
+    inverse = np.linalg.inv(linear.own + rolling_noise_m * linear.noise + known)
+    distance = np.asarray(np.einsum("ni,nij,nj->n", linear.e, inverse, linear.e))
+    return normal_score(distance, linear.count)
+
+
 def misclosures(stack: Stack, closures: Closures, parameters: Float) -> Float:
     """Misclosures (n, 4) by any parameter set (3,)."""
     return misclosure(closures, stack.predict(parameters).pose)

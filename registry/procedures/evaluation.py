@@ -24,7 +24,7 @@ from registry.numerics import closure_map
 from registry.numerics.arrays import Bool, Float
 from registry.numerics.closure_map import ClosureMap, CountsStack, MapStack
 from registry.numerics.conformity import ACT_AT, WATCH_AT, probability_beyond
-from registry.numerics.fit import DEFAULT_ROLLING_NOISE_M, Fit, fit, misclosures
+from registry.numerics.fit import DEFAULT_ROLLING_NOISE_M, Fit, fit, misclosures, scores_against
 from registry.numerics.observability import (
     deviation,
     observed,
@@ -33,6 +33,7 @@ from registry.numerics.observability import (
     to_parameters,
     to_quantities,
 )
+from registry.numerics.recent import last_break
 from registry.procedures import alerting
 from registry.procedures.baseline import (
     calibration_result,
@@ -57,6 +58,8 @@ from registry.storage.engine import Connection
 #: A new proposal replaces an open one when it differs by more than its own standard uncertainty, or is this much surer.
 _SURER = 0.7
 _LEAST_DEGREES = 1.0
+#: Runs that leave every quantity looser than this (relative) do not stand for a state of their own.
+_TELLS_SOMETHING = 0.01
 
 
 @dataclass(frozen=True)
@@ -81,6 +84,16 @@ class _Question:
     runs: tuple[Run, ...]
     inputs: str
     last: Evaluation | None
+
+
+@dataclass(frozen=True)
+class _Fitted:
+    """Runs and what a fit says of them; ``new_maps`` where the old ones did not reach."""
+
+    evidence: Evidence
+    stack: MapStack | CountsStack
+    answer: Fit
+    new_maps: dict[str, ClosureMap]
 
 
 @dataclass(frozen=True)
@@ -170,24 +183,55 @@ def _answer(c: Connection, question: _Question) -> _Answer | None:
     calibration = question.in_force
     if calibration is None:
         return None
-    evidence = Evidence(c, question.runs)
+    fitted = _fit(c, question.runs, calibration)
+    quantities, confirmed = _judge(fitted.answer, calibration, question.version)
+    result = _result(fitted, calibration, quantities, confirmed)
+    proposal = None
+    if result.finding == "beyond":
+        proposal = _proposal(fitted, np.array([item.observed for item in quantities]), calibration)
+    return _Answer(result, confirmed, proposal, fitted.new_maps)
+
+
+def _fit(c: Connection, runs: tuple[Run, ...], calibration: Calibration) -> _Fitted:
+    """Fit the runs that belong to the vehicle's latest state, from their maps where these reach, else from the counts.
+
+    A robust fit stays with the majority, so that a change would stay unseen until most of the window was driven after
+    it.
+    Therefore runs from which on the calibration in force no longer fits are judged alone, when they tell anything.
+    """
+    evidence = Evidence(c, runs)
     reference = parameter_array(calibration.result.parameters)
+    covariance = quantity_covariance(np.array(calibration.result.covariance_relative), reference)
     noise = calibration.result.random_error_m_per_sqrt_m
     guess = DEFAULT_ROLLING_NOISE_M if noise is None else noise**2
     stack: MapStack | CountsStack | None = evidence.map_stack(c)
-    answer = None if stack is None else fit(stack, evidence.closures, reference, rolling_guess_m=guess)
-    new_maps: dict[str, ClosureMap] = {}
-    if stack is None or answer is None or answer.status == "outside maps":
+    if stack is None or not bool(stack.inside(reference).all()):
         stack = evidence.counts_stack(c)
+    begin = last_break(scores_against(stack, evidence.closures, reference, covariance, guess))
+    if begin > 0:
+        latest = _fit_all(c, Evidence(c, runs[begin:]), reference, guess)
+        if latest.answer.status == "converged" and bool(np.any(latest.answer.u_quantities < _TELLS_SOMETHING)):
+            return latest
+    return _fit_all(c, evidence, reference, guess)
+
+
+def _fit_all(c: Connection, evidence: Evidence, reference: Float, guess: float) -> _Fitted:
+    """Fit all the runs; where their maps do not reach, integrate the counts and make new maps round the outcome."""
+    stack: MapStack | CountsStack | None = evidence.map_stack(c)
+    if stack is not None:
         answer = fit(stack, evidence.closures, reference, rolling_guess_m=guess)
-        new_maps = refold(c, evidence, answer.parameters)
-    quantities, confirmed = _judge(answer, calibration, question.version)
-    seen = np.array([item.observed for item in quantities])
-    result = _result(question, answer, quantities, confirmed)
-    proposal = None
-    if result.finding == "beyond":
-        proposal = _proposal(stack, evidence, answer, seen, calibration)
-    return _Answer(result, confirmed, proposal, new_maps)
+        if answer.status != "outside maps":
+            return _Fitted(evidence, stack, answer, {})
+    stack = evidence.counts_stack(c)
+    answer = fit(stack, evidence.closures, reference, rolling_guess_m=guess)
+    return _Fitted(evidence, stack, answer, refold(c, evidence, answer.parameters))
+
+
+def _seen(answer: Fit, version: VehicleVersion) -> Bool:
+    """Which quantities (3,) the runs behind a fit determine."""
+    tolerance = np.array(version.statement.tolerance.as_tuple())
+    settled = answer.status == "converged" and answer.degrees_of_freedom >= _LEAST_DEGREES
+    return observed(answer.u_quantities, tolerance) & settled
 
 
 def _judge(
@@ -197,8 +241,7 @@ def _judge(
     reference = parameter_array(calibration.result.parameters)
     tolerance = np.array(version.statement.tolerance.as_tuple())
     away = deviation(answer.parameters, reference)
-    settled = answer.status == "converged" and answer.degrees_of_freedom >= _LEAST_DEGREES
-    seen = observed(answer.u_quantities, tolerance) & settled
+    seen = _seen(answer, version)
     own = quantity_covariance(np.array(calibration.result.covariance_relative), reference)
     u = np.sqrt(answer.u_quantities**2 + np.diag(own))
     without = _without_each_run(answer, reference)
@@ -227,8 +270,8 @@ def _without_each_run(answer: Fit, reference: Float) -> Float:
 
 
 def _result(
-    question: _Question,
-    answer: Fit,
+    fitted: _Fitted,
+    calibration: Calibration,
     quantities: tuple[QuantityFinding, QuantityFinding, QuantityFinding],
     confirmed: tuple[bool, bool, bool],
 ) -> EvaluationResult:
@@ -239,12 +282,13 @@ def _result(
     ]
     agreed = not worst or any(worst)
     finding = judgement.finding_of(quantities, confirmed=agreed)
+    answer, runs = fitted.answer, fitted.evidence.runs
     u_relative = np.sqrt(np.diag(answer.covariance_relative))
     return EvaluationResult(
-        against=None if question.in_force is None else question.in_force.calibration_id,
-        runs_used=len(question.runs),
-        first_run_at=question.runs[0].started_at,
-        last_run_at=question.runs[-1].started_at,
+        against=calibration.calibration_id,
+        runs_used=len(runs),
+        first_run_at=runs[0].started_at,
+        last_run_at=runs[-1].started_at,
         tick_factor=quantities[0],
         side_ratio=quantities[1],
         width=quantities[2],
@@ -252,18 +296,16 @@ def _result(
         fitted_u_relative=(float(u_relative[0]), float(u_relative[1]), float(u_relative[2])),
         coverage_factor=answer.coverage_factor,
         finding=finding,
-        message=judgement.message_of(quantities, finding, len(question.runs), confirmed=agreed),
+        message=judgement.message_of(quantities, finding, len(runs), confirmed=agreed),
     )
 
 
-def _proposal(
-    stack: MapStack | CountsStack, evidence: Evidence, answer: Fit, seen: Bool, calibration: Calibration
-) -> CalibrationResult:
+def _proposal(fitted: _Fitted, seen: Bool, calibration: Calibration) -> CalibrationResult:
     """The fit as a calibration; what the runs do not tell is copied from the one in force."""
-    reference = parameter_array(calibration.result.parameters)
+    evidence, answer = fitted.evidence, fitted.answer
     if not seen.all():
-        answer = fit(stack, evidence.closures, answer.parameters, hold_from(calibration, ~seen))
-    before = misclosures(stack, evidence.closures, reference)
+        answer = fit(fitted.stack, evidence.closures, answer.parameters, hold_from(calibration, ~seen))
+    before = misclosures(fitted.stack, evidence.closures, parameter_array(calibration.result.parameters))
     note = f"proposed by the evaluation of {len(evidence.runs)} runs"
     return calibration_result("evaluation", answer, seen, contributions(evidence.runs, answer, before), note)
 
