@@ -28,6 +28,9 @@ from registry.numerics.arrays import Float
 
 #: Below this half turn per sample the Taylor series of sinc and of its slope are exact to double precision.
 _SERIES_LIMIT_RAD = 0.2
+#: Samples worked on together: few enough to stay in the processor's cache, and for the linear algebra to stay on one
+#: thread.
+_BLOCK = 2048
 
 
 class EndPose(NamedTuple):
@@ -78,32 +81,47 @@ def end_pose(left_ticks: Float, right_ticks: Float, parameters: Float) -> EndPos
     """
     k_left, k_right, width = (float(value) for value in parameters)
     a, b = k_left / width, k_right / width
-    left_half, right_half = 0.5 * left_ticks, 0.5 * right_ticks
-    left_mid = np.cumsum(left_ticks)
-    right_mid = np.cumsum(right_ticks)
-    left_total = float(left_mid[-1]) if left_mid.size else 0.0
-    right_total = float(right_mid[-1]) if right_mid.size else 0.0
-    left_mid -= left_half
-    right_mid -= right_half
-    heading = b * right_mid - a * left_mid
-    left_part, right_part = a * left_half, b * right_half
-    shrink, slope = sinc_and_slope(right_part - left_part)
-    advance = left_part + right_part
-    cosine, sine = np.cos(heading), np.sin(heading)
-    step = advance * shrink
-    slope *= advance
-    by_a = left_half * (shrink - slope)
-    by_b = right_half * (shrink + slope)
-    step_cosine, step_sine = step * cosine, step * sine
-    g = np.array([step_cosine.sum(), step_sine.sum()])
-    g_a = np.array([by_a @ cosine + left_mid @ step_sine, by_a @ sine - left_mid @ step_cosine])
-    g_b = np.array([by_b @ cosine - right_mid @ step_sine, by_b @ sine + right_mid @ step_cosine])
+    left_total = right_total = 0.0
+    sums = np.zeros((5, 2))
+    for begin in range(0, left_ticks.size, _BLOCK):
+        left, right = left_ticks[begin : begin + _BLOCK], right_ticks[begin : begin + _BLOCK]
+        left_after, right_after = left_total + np.cumsum(left), right_total + np.cumsum(right)
+        sums += _block_sums(a, b, 0.5 * left, 0.5 * right, left_after, right_after)
+        left_total, right_total = float(left_after[-1]), float(right_after[-1])
+    g = sums[0]
+    # The heading moves by -L with a and by R with b: a quarter turn from the way itself.
+    g_a = sums[1] + [sums[3, 1], -sums[3, 0]]
+    g_b = sums[2] + [-sums[4, 1], sums[4, 0]]
     turn = b * right_total - a * left_total
     pose = np.array([width * g[0], width * g[1], turn])
     jacobian = np.empty((3, 3))
     jacobian[:2, 0], jacobian[:2, 1], jacobian[:2, 2] = g_a, g_b, g - a * g_a - b * g_b
     jacobian[2] = (-left_total / width, right_total / width, -turn / width)
     return EndPose(pose, jacobian)
+
+
+def _block_sums(
+    a: float, b: float, left_half: Float, right_half: Float, left_after: Float, right_after: Float
+) -> Float:
+    """Sums (5, 2) over cosine and sine of the headings in the middle of the samples: the way, its slopes by a and b at
+    fixed heading, and the way weighted with the counts left and right in the middle of the samples.
+    """
+    left_mid, right_mid = left_after - left_half, right_after - right_half
+    heading = b * right_mid - a * left_mid
+    left, right = a * left_half, b * right_half
+    shrink, slope = sinc_and_slope(right - left)
+    advance = left + right
+    slope *= advance
+    rows = np.empty((5, heading.size))
+    step = np.multiply(advance, shrink, out=rows[0])
+    np.multiply(left_half, shrink - slope, out=rows[1])
+    np.multiply(right_half, shrink + slope, out=rows[2])
+    np.multiply(left_mid, step, out=rows[3])
+    np.multiply(right_mid, step, out=rows[4])
+    angles = np.empty((2, heading.size))
+    np.cos(heading, out=angles[0])
+    np.sin(heading, out=angles[1])
+    return np.asarray(rows @ angles.T)
 
 
 def path(left_ticks: Float, right_ticks: Float, parameters: Float) -> Float:

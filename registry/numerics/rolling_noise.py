@@ -56,5 +56,7 @@ def noise_covariance(left_ticks: Float, right_ticks: Float, parameters: Float) -
             g = np.stack(
                 [half_cosine + sign * to_go_y, half_sine - sign * to_go_x, np.full(heading.size, -sign / width)]
             )
-            result += (g * (0.5 * np.abs(rolled))) @ g.T
+            # The product of a matrix with its own transpose is symmetric to the last bit.
+            g *= np.sqrt(0.5 * np.abs(rolled))
+            result += g @ g.T
     return result
