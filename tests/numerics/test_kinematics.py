@@ -99,7 +99,7 @@ def test_the_jacobian_agrees_with_differences(case: tuple[Float, Float, Float]) 
         step[column] = h * parameters[column]
         near = [end_pose(left, right, parameters + s * step).pose for s in (-2.0, -1.0, 1.0, 2.0)]
         slope = (near[0] - 8 * near[1] + 8 * near[2] - near[3]) / (12 * h)
-        # Five points: the error is h^4 / 30 times the fifth derivative (at most rolled x turned^5), beside rounding over h.
+        # Five points: the error is h^4 / 30 of the fifth derivative (at most rolled x turned^5), beside rounding.
         scale = (1 + _rolled_m(*case)) * (1 + turned)
         assert analytic[:, column] == pytest.approx(slope, abs=1e-9 * scale)
 

@@ -36,7 +36,7 @@ def test_the_covariance_does_not_depend_on_how_the_samples_are_cut(parts: int, t
     whole = noise_covariance(left, right, truth.parameters)
     cut = noise_covariance(np.repeat(left / parts, parts), np.repeat(right / parts, parts), truth.parameters)
     sd = np.sqrt(np.diag(whole)) + 1e-9
-    # Two Gauss points per sample err by its turn to the fourth over 4320, times what is integrated and what is left of it.
+    # Two Gauss points per sample err by its turn to the fourth over 4320, times what is integrated.
     assert (cut - whole) / np.outer(sd, sd) == pytest.approx(0.0, abs=1e-7 + 1e-3 * turn**4)
 
 
