@@ -209,7 +209,7 @@ def _fit(c: Connection, runs: tuple[Run, ...], calibration: Calibration) -> _Fit
         stack = evidence.counts_stack(c)
     begin = last_break(scores_against(stack, evidence.closures, reference, covariance, guess))
     if begin > 0:
-        latest = _fit_all(c, Evidence(c, runs[begin:]), reference, guess)
+        latest = _fit_all(c, evidence.since(begin), reference, guess)
         if latest.answer.status == "converged" and bool(np.any(latest.answer.u_quantities < _TELLS_SOMETHING)):
             return latest
     return _fit_all(c, evidence, reference, guess)

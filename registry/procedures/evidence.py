@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from copy import copy
 
 import numpy as np
 
@@ -76,6 +77,7 @@ class Evidence:
     def __init__(self, c: Connection, runs: Sequence[Run]) -> None:
         self.runs = tuple(runs)
         self.closures = closures_of([run.closure for run in self.runs])
+        self._maps: list[ClosureMap] | None = None
         self._versions: dict[int, VehicleVersion] = {}
         for run in self.runs:
             if run.vehicle_version not in self._versions:
@@ -88,12 +90,23 @@ class Evidence:
             ]
         ).reshape(len(self.runs), 2)
 
+    def since(self, begin: int) -> Evidence:
+        """The runs from one of them on, with what was read of them already."""
+        part = copy(self)
+        part.runs = self.runs[begin:]
+        part.closures = self.closures.take(np.arange(len(self.runs)) >= begin)
+        part.levers_m = self.levers_m[begin:]
+        part._maps = None if self._maps is None else self._maps[begin:]
+        return part
+
     def map_stack(self, c: Connection) -> MapStack | None:
         """The stored closure maps, or None when a run has none of this version."""
-        blobs = run_store.maps(c, [run.run_id for run in self.runs])
-        if len(blobs) != len(self.runs) or any(blob[0] != closure_map.MAP_VERSION for blob in blobs.values()):
-            return None
-        return MapStack([closure_map.decode(blobs[run.run_id]) for run in self.runs], self.levers_m)
+        if self._maps is None:
+            blobs = run_store.maps(c, [run.run_id for run in self.runs])
+            if len(blobs) != len(self.runs) or any(blob[0] != closure_map.MAP_VERSION for blob in blobs.values()):
+                return None
+            self._maps = [closure_map.decode(blobs[run.run_id]) for run in self.runs]
+        return MapStack(self._maps, self.levers_m)
 
     def ticks(self, c: Connection) -> list[tuple[Float, Float]]:
         """The increments of every run, from the stored counts."""
