@@ -5,6 +5,7 @@ Nothing is told by colour alone: lines differ by dash, marks by shape, and the n
 
 from __future__ import annotations
 
+from collections import Counter
 from dataclasses import dataclass
 from typing import Any, Literal
 
@@ -59,7 +60,14 @@ def look(inks: Inks) -> Document:
         "labelFont": FONT,
         "titleFont": FONT,
     }
-    legend = {"labelColor": inks.ink, "labelFont": FONT, "labelFontSize": 13, "labelLimit": 320, "title": None}
+    legend = {
+        "offset": 22,
+        "labelColor": inks.ink,
+        "labelFont": FONT,
+        "labelFontSize": 13,
+        "labelLimit": 320,
+        "title": None,
+    }
     return {
         "background": inks.sheet,
         "font": FONT,
@@ -112,19 +120,17 @@ def _time(field: str) -> alt.X:
     return alt.X(field, type="temporal", scale=alt.Scale(type="utc"), axis=axis)
 
 
-def _value(field: str, unit: str) -> alt.Y:
-    axis = alt.Axis(title=unit, titleAngle=0, titleAlign="left", titleY=-8, titleX=0, tickCount=4)
+def _value(field: str) -> alt.Y:
+    axis = alt.Axis(title=None, tickCount=4)
     return alt.Y(field, type="quantitative", scale=alt.Scale(zero=False, nice=False, padding=8), axis=axis)
 
 
 def _corridor_layers(history: History, inks: Inks) -> list[alt.Chart]:
     base = alt.Chart(_rows([_corridor_row(corridor) for corridor in history.corridors]))
     band = base.mark_rect(color=inks.corridor, opacity=1).encode(
-        x=_time("from"), x2="to", y=_value("low", history.unit), y2="high", tooltip=[alt.Tooltip("said:N", title=" ")]
+        x=_time("from"), x2="to", y=_value("low"), y2="high", tooltip=[alt.Tooltip("said:N", title=" ")]
     )
-    middle = base.mark_rule(color=inks.soft, strokeWidth=1).encode(
-        x=_time("from"), x2="to", y=_value("value", history.unit)
-    )
+    middle = base.mark_rule(color=inks.soft, strokeWidth=1).encode(x=_time("from"), x2="to", y=_value("value"))
     return [band, middle]
 
 
@@ -146,16 +152,20 @@ def _event_layers(history: History, inks: Inks) -> list[alt.Chart]:
 
 
 def _estimate_layers(history: History, inks: Inks) -> list[alt.Chart]:
-    base = alt.Chart(_rows(_point_rows(history)))
+    rows = _point_rows(history)
+    base = alt.Chart(_rows(rows))
+    # A band needs two points: one that stands alone shows its interval as a whisker.
+    sizes = Counter(row["stretch"] for row in rows)
+    lone = alt.Chart(_rows([row for row in rows if sizes[row["stretch"]] == 1]))
     tips = [
         alt.Tooltip("day:N", title="evaluated"),
         alt.Tooltip("said:N", title=history.title.lower()),
         alt.Tooltip("runs:Q", title="runs"),
     ]
-    low, value = _value("low", history.unit), _value("value", history.unit)
+    low, value = _value("low"), _value("value")
     return [
         base.mark_area(color=inks.ink, opacity=0.16).encode(x=_time("at"), y=low, y2="high", detail="stretch:N"),
-        base.mark_rule(color=inks.ink, opacity=0.35, strokeWidth=1).encode(x=_time("at"), y=low, y2="high"),
+        lone.mark_rule(color=inks.ink, opacity=0.4, strokeWidth=1.5).encode(x=_time("at"), y=low, y2="high"),
         base.mark_line(color=inks.ink, strokeWidth=1.5).encode(x=_time("at"), y=value, detail="stretch:N"),
         base.mark_point(color=inks.ink, filled=True, opacity=1, size=26).encode(x=_time("at"), y=value, tooltip=tips),
     ]
@@ -186,5 +196,5 @@ def history_chart(history: History, shade: Shade, width: int) -> Document:
     )
     document: Document = chart.to_dict()
     document["config"] = look(inks)
-    document["autosize"] = {"type": "fit", "contains": "padding"}
+    document["autosize"] = {"type": "fit-x", "contains": "padding"}
     return document

@@ -5,7 +5,7 @@ from __future__ import annotations
 from flask import current_app
 from flask_login import current_user
 
-from registry.domain.person import Actor, Person
+from registry.domain.person import Actor, Person, Role
 from registry.services import Services
 
 EXTENSION = "rollbook.web"
@@ -20,6 +20,11 @@ def services() -> Services:
 def person() -> Person | None:
     """The person who is signed in, if anyone is."""
     return current_user.person if current_user.is_authenticated else None
+
+
+def may(role: Role) -> bool:
+    """Whether whoever is signed in may do what ``role`` may do; pages show only what they may."""
+    return current_user.is_authenticated and actor().may(role)
 
 
 def actor() -> Actor:

@@ -5,6 +5,8 @@ from __future__ import annotations
 import math
 from datetime import UTC, datetime
 
+from registry.domain.run import Misclosure
+
 MINUS = "\N{MINUS SIGN}"
 DASH = "\N{EN DASH}"
 UNKNOWN = "not measured"
@@ -90,3 +92,31 @@ def span(seconds: float) -> str:
 def count(number: int, one: str, many: str | None = None) -> str:
     """``1 run``, ``3 runs``."""
     return f"{number:,} {one if number == 1 else (many or one + 's')}"
+
+
+def closing_words(error: Misclosure | None) -> str:
+    """A closing error in a few words: how far from the mark it ended, and how far off in heading or distance."""
+    if error is None:
+        return UNKNOWN
+    told = []
+    if error.x_m is not None and error.y_m is not None:
+        told.append(f"{millimetres(math.hypot(error.x_m, error.y_m), 0)} from the mark")
+    else:
+        told += [
+            f"{millimetres(value, 0)} {where}"
+            for value, where in ((error.x_m, "ahead"), (error.y_m, "to the left"))
+            if value is not None
+        ]
+    if error.distance_m is not None:
+        told.append(f"{millimetres(error.distance_m, 0)} in distance")
+    if error.heading_rad is not None:
+        told.append(f"{degrees(error.heading_rad)} in heading")
+    return ", ".join(told) or UNKNOWN
+
+
+def who(actor: str) -> str:
+    """Who did it, as people would say: a name, the schedule, a vehicle itself, the console."""
+    kind, _, name = actor.partition(":")
+    if kind == "vehicle" and name:
+        return f"vehicle {name}"
+    return {"schedule": "the schedule", "local": "the console"}.get(kind, actor)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from datetime import UTC
+from datetime import UTC, datetime
 from typing import Any, TypeVar
 
 from wtforms import (
@@ -22,7 +22,8 @@ from wtforms.validators import InputRequired, Length, Optional, ValidationError
 from wtforms.widgets import TextInput
 
 from registry.domain.maintenance import MAINTENANCE_KINDS, MAINTENANCE_WORDS
-from registry.errors import Conflict, Invalid, NotAllowed, NothingInForce, NotObserved, Refusal
+from registry.domain.vehicle import Parameters
+from registry.errors import Conflict, FieldError, Invalid, NotAllowed, NothingInForce, NotObserved, Refusal
 
 T = TypeVar("T")
 
@@ -38,10 +39,10 @@ class Posted(Form):
     problem: str | None = None
     key = "form"
 
-    def __init__(self, formdata: Any = None, **kwargs: Any) -> None:
+    def __init__(self, formdata: Any = None, *, key: str | None = None, **kwargs: Any) -> None:
         super().__init__(formdata, **kwargs)
         for field in self:
-            field.id = f"{self.key}-{field.name}"
+            field.id = f"{key or self.key}-{field.name}"
             field.label.field_id = field.id
 
     def attempt(self, deed: Callable[[], T]) -> T | None:
@@ -212,6 +213,22 @@ class EnteredForm(Posted):
     u_width_mm = _measure("u of width, mm")
     note = _note()
 
+    @property
+    def parameters(self) -> Parameters:
+        """The values in metres."""
+        left, right, width = (
+            field.data or 0.0 for field in (self.left_mm_per_tick, self.right_mm_per_tick, self.width_mm)
+        )
+        return Parameters(left * 1e-3, right * 1e-3, width * 1e-3)
+
+    @property
+    def u_m(self) -> tuple[float, float, float]:
+        """Their standard uncertainties in metres."""
+        left, right, width = (
+            field.data or 0.0 for field in (self.u_left_mm_per_tick, self.u_right_mm_per_tick, self.u_width_mm)
+        )
+        return left * 1e-3, right * 1e-3, width * 1e-3
+
 
 class MaintenanceForm(Posted):
     """Record work done on the vehicle."""
@@ -225,6 +242,19 @@ class MaintenanceForm(Posted):
     )
     done_at = UtcField("Done at (UTC)", [InputRequired("Write when it was done.")])
     note = _note()
+
+    @property
+    def moment(self) -> datetime:
+        """When it was done.
+
+        Raises
+        ------
+        Invalid
+            The form does not say.
+        """
+        if self.done_at.data is None:
+            raise Invalid(REQUIRED, (FieldError("/done_at", REQUIRED),))
+        return self.done_at.data
 
 
 class ReasonForm(Posted):

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass
 from datetime import datetime
+from itertools import zip_longest
 from typing import Literal
 
 from registry.domain.calibration import Calibration, InForce
@@ -12,6 +13,7 @@ from registry.domain.evaluation import Evaluation
 from registry.domain.maintenance import MAINTENANCE_WORDS, Maintenance
 from registry.domain.tolerance import Tolerance
 from registry.domain.vehicle import Parameters
+from registry.web.figures import DASH, with_uncertainty
 
 Line = Literal["left", "right", "side_ratio", "width"]
 LINES: tuple[Line, ...] = ("left", "right", "side_ratio", "width")
@@ -152,7 +154,7 @@ def corridors_of(line: Line, past: VehiclePast) -> tuple[Corridor, ...]:
     """One corridor for each stretch of time on one calibration."""
     by_id = {calibration.calibration_id: calibration for calibration in past.calibrations}
     corridors: list[Corridor] = []
-    for entry, following in zip(past.in_force, [*past.in_force[1:], None], strict=True):
+    for entry, following in zip_longest(past.in_force, past.in_force[1:]):
         if entry.calibration_id is None:
             continue
         calibration = by_id[entry.calibration_id]
@@ -184,6 +186,27 @@ def events_of(past: VehiclePast) -> tuple[Event, ...]:
         for work in past.maintenance
     ]
     return tuple(sorted(adoptions + works, key=lambda event: event.at))
+
+
+@dataclass(frozen=True)
+class NumberRow:
+    """One evaluation in numbers, one text a line."""
+
+    as_of: datetime
+    runs_used: int
+    texts: tuple[str, ...]
+
+
+def number_rows(histories: Sequence[History]) -> list[NumberRow]:
+    """The points of several histories of one vehicle as rows of a table, newest first."""
+    rows = zip(*(history.points for history in histories), strict=True)
+    return [NumberRow(points[0].as_of, points[0].runs_used, tuple(map(_written, points))) for points in rows][::-1]
+
+
+def _written(point: Point) -> str:
+    if point.value is None or point.expanded is None:
+        return DASH
+    return " ± ".join(with_uncertainty(point.value, point.expanded))
 
 
 def history_of(line: Line, past: VehiclePast) -> History:

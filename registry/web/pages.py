@@ -11,10 +11,13 @@ from werkzeug.exceptions import NotFound
 
 from registry.services import Services
 from registry.web import alerts, calibration, drawing, figures, fleet, journal, run, sign_in, vehicle
-from registry.web.current import EXTENSION, person
+from registry.web.current import EXTENSION, may, person
 from registry.web.policy import guarded
 
 _HERE = Path(__file__).parent
+
+#: What templates write figures with.
+FILTERS = ("stamp", "moment", "day", "percent", "degrees", "millimetres", "metres", "span", "decimals", "who")
 
 
 def register(app: Flask, services: Services) -> None:
@@ -46,9 +49,8 @@ def _pages() -> Blueprint:
     )
     pages.before_request(sign_in.guard)
     pages.after_request(guarded)
-    pages.add_app_template_filter(figures.stamp, "stamp")
-    for name in ("moment", "day", "percent", "degrees", "millimetres", "metres", "span", "decimals"):
-        pages.add_app_template_filter(getattr(figures, name), name)
+    for name in FILTERS:
+        pages.add_app_template_filter(vars(figures)[name], name)
     look = _look()
     pages.app_context_processor(
         lambda: {
@@ -57,6 +59,8 @@ def _pages() -> Blueprint:
             "drawing_digest": lambda: drawing.script().digest,
             "look": look,
             "count": figures.count,
+            "closing_words": figures.closing_words,
+            "may": may,
         }
     )
     pages.add_url_rule("/drawing/<digest>.js", "drawing_script", _drawing_script)
@@ -76,7 +80,7 @@ def _drawing_script(digest: str) -> Response:
     script = drawing.script()
     if digest != script.digest:
         raise NotFound
-    packed = "gzip" in request.accept_encodings
+    packed = request.accept_encodings.quality("gzip") > 0
     response = make_response(script.packed if packed else script.plain)
     response.mimetype = "text/javascript"
     response.headers["Vary"] = "Accept-Encoding"

@@ -15,13 +15,15 @@ import altair as alt
 from registry.web.charts import FONT, INKS, Document, Inks, Shade, held_width, look
 from registry.web.figures import decimals
 
-HIGHEST = 460
-LOWEST = 180
+HIGHEST = 400
+LOWEST = 220
 #: More points than a screen can show apart are no truer: 600 on a path of 200 m is one each third of a metre.
 MOST_POINTS = 600
 #: Room round the plot for axis labels, in pixels.
 MARGIN_WIDE = 56
-MARGIN_HIGH = 44
+
+#: A thin upright cross, as surveyors draw a mark.
+PLUS = "M-0.6,0H0.6M0,-0.6V0.6"
 
 
 @dataclass(frozen=True)
@@ -116,7 +118,9 @@ def _mark_layers(mark: Mark | None, axes: tuple[alt.X, alt.Y], inks: Inks, per_m
             )
         )
     cross = alt.Chart(alt.InlineData(values=[{"x": mark.x_m * per_m, "y": mark.y_m * per_m}]))
-    layers.append(cross.mark_point(color=inks.ink, shape="cross", size=160, filled=False, opacity=1).encode(x=x, y=y))
+    layers.append(
+        cross.mark_point(color=inks.ink, shape=PLUS, size=500, filled=False, strokeWidth=2, opacity=1).encode(x=x, y=y)
+    )
     return layers
 
 

@@ -22,8 +22,8 @@ from registry.web.figures import decimals, interval, percent
 VIEW_WIDTH = 240.0
 VIEW_HEIGHT = 48.0
 MIDDLE = VIEW_WIDTH / 2.0
-#: One tolerance in view box units: the view reaches a little over two tolerances to either side.
-REACH = 52.0
+#: One tolerance in view box units: the view reaches half a tolerance beyond either jaw.
+REACH = 76.0
 EDGE = 5.0
 ESTIMATE_Y = 13.0
 TRAIL_TOP = 22.0
