@@ -33,6 +33,7 @@ def upgrade() -> None:
         sa.Column("holder", sa.String(length=200), nullable=False),
         sa.Column("fence", WHOLE, nullable=False),
         sa.Column("expires_at", TIME, nullable=False),
+        sa.Column("done_at", TIME, nullable=True),
         sa.PrimaryKeyConstraint("name", name=op.f("pk_leases")),
     )
     op.create_table(

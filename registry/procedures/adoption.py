@@ -9,6 +9,7 @@ from registry.clock import utc_text, whole_second
 from registry.domain.calibration import Calibration, InForce
 from registry.domain.person import Actor
 from registry.errors import Conflict, FieldError, Invalid, NotAllowed
+from registry.procedures import alerting
 from registry.procedures.authority import require_adopter
 from registry.procedures.boot_sheets import refresh_sheet
 from registry.services import Services
@@ -75,6 +76,8 @@ def adopt(
             "reason": reason,
         }
         journal.write(c, now, str(actor), "adopted", calibration.vehicle_id, what)
+        # What was said against the calibration before no longer speaks of what the vehicle is to load.
+        alerting.clear_deviations(c, services, calibration.vehicle_id, now, "another calibration came into force")
         refresh_sheet(c, calibration.vehicle_id, now)
         return calibrations.by_id(c, calibration_id)
 
@@ -129,6 +132,8 @@ def withdraw(
             "reason": reason,
         }
         journal.write(c, now, str(actor), "withdrawn", calibration.vehicle_id, what)
+        if was_in_force:
+            alerting.clear_deviations(c, services, calibration.vehicle_id, now, "the calibration was withdrawn")
         refresh_sheet(c, calibration.vehicle_id, now)
         return Withdrawal(calibrations.by_id(c, calibration_id), holds, loaded_by)
 

@@ -16,11 +16,12 @@ from pathlib import Path
 from typing import Any
 
 from sqlalchemy import Connection, Engine, create_engine, event
+from sqlalchemy.exc import DBAPIError as DatabaseError
 from sqlalchemy.exc import OperationalError
 
 from registry.errors import Unready
 
-__all__ = ["Connection", "Engine", "make_engine", "reading", "writing"]
+__all__ = ["Connection", "DatabaseError", "Engine", "make_engine", "reading", "writing"]
 
 #: A writer waits this long for the one before it. Writes last milliseconds; a bulk load may hold the lock for seconds.
 BUSY_TIMEOUT_S = 30

@@ -419,4 +419,5 @@ leases = Table(
     Column("holder", _NAME, nullable=False),
     Column("fence", Whole(), nullable=False),
     Column("expires_at", UtcTime(), nullable=False),
+    Column("done_at", UtcTime()),
 )
