@@ -101,7 +101,7 @@ def pointers(problem: dict[str, Any]) -> list[str]:
     return [error["pointer"] for error in problem["errors"]]
 
 
-def drive(*legs: tuple[float, float], left_start: int = 1000, right_start: int = 2000) -> dict[str, Any]:
+def drive(*legs: tuple[float, float], left_start: int = 100_000, right_start: int = 200_000) -> dict[str, Any]:
     """Log a drive of straight legs and spins (millimetres ahead, degrees turned) at 10 samples a second."""
     x = y = heading = left = right = 0.0
     time_s, lefts, rights = [0.0], [left_start], [right_start]
