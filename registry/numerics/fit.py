@@ -1,12 +1,12 @@
 r"""Restricted maximum likelihood of tick factors and width from the closures of many runs.
 
 A misclosure has the covariance :math:`V = R + qN + \tau^2 J S J^T`: the closure's own, rolling noise, and the spread
-of the
-parameters from run to run (load, surface, temperature), shaped like the usual tolerances. The quantities
-(ln tick factor, side ratio, ln width) follow from Gauss-Newton steps with the analytic Jacobian; after each step q (and
-:math:`\tau^2`, where the data ask for it) moves by one Fisher-scoring step on the restricted likelihood. One run's
-influence is bounded: beyond a normalised distance its weight falls with the square of the distance, so that a reading
-that is a metre wrong pulls less the wronger it is.
+of the parameters from run to run (load, surface, temperature), shaped like the usual tolerances. The quantities
+(ln tick factor, side ratio, ln width) follow from damped Gauss-Newton steps with the analytic Jacobian
+(:mod:`registry.numerics.least_squares`); after each step q (and :math:`\tau^2`, where the data ask for it) moves by one
+Fisher-scoring step on the restricted likelihood (:mod:`registry.numerics.variance_parts`). One run's influence is
+bounded: beyond a normalised distance its weight falls with the square of the distance, so that a reading that is a
+metre wrong pulls less the wronger it is.
 
 Only misuse raises. What the runs do not determine stays where the start value is, with a standard uncertainty of the
 order of one, and is told by the covariance: see :mod:`registry.numerics.observability`.
@@ -14,59 +14,44 @@ order of one, and is told by the covariance: see :mod:`registry.numerics.observa
 References
 ----------
 .. [1] Patterson, Thompson: Recovery of inter-block information when block sizes are unequal. Biometrika 58 (1971)
-545-554.
+   545-554.
 .. [2] Chong, Kleeman: Accurate odometry and error modelling for a mobile robot. IEEE ICRA 1997.
 .. [3] Wilson, Hilferty: The distribution of chi-square. PNAS 17 (1931) 684-688.
 .. [4] Satterthwaite: An approximate distribution of estimates of variance components. Biometrics Bulletin 2 (1946)
-110-114.
+   110-114.
 .. [5] Birge: The calculation of errors by the method of least squares. Physical Review 40 (1932) 207-227.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
-from typing import Literal, Protocol
+from dataclasses import dataclass
+from typing import Literal
 
 import numpy as np
 from scipy.special import stdtrit
 
 from registry.numerics.arrays import Bool, Float
-from registry.numerics.closure import Closures, component_jacobian, misclosure, misclosure_covariance
-from registry.numerics.closure_map import Prediction
+from registry.numerics.closure import Closures, misclosure
+from registry.numerics.least_squares import Solution, gauss_newton, solve
+from registry.numerics.linearised import Stack, linearise, normal_score, robust_weight, whitener
 from registry.numerics.observability import relative_from_quantities, to_parameters, to_quantities
+from registry.numerics.variance_parts import ROLLING_PRIOR_SD, VarianceParts, Whitened
 
 METHOD_VERSION = "1"
 
 #: Rolling noise before any run has told: half a millimetre per square root of a metre, squared.
 DEFAULT_ROLLING_NOISE_M = 2.5e-7
-#: How loosely that is held, in the logarithm of the variance.
-_ROLLING_PRIOR_SD = 1.5
 #: A direction the runs leave free is kept at the start value with these standard deviations; a third of any tolerance
 #: is far below.
 _WEAK_SD = np.array([1.0, 0.3, 1.0])
-#: Run-to-run spread of (tick factor, side ratio, width), in proportion to the usual tolerances.
-_SPREAD_SHAPE = np.diag([1.0, 0.09, 9.0])
-#: Whether the data ask for spread: one-sided 5 % point of the score test, and never from a handful of runs.
-_SPREAD_SCORE = 1.645
-_SPREAD_MIN_RUNS = 8
-#: Normal score of a run's distance beyond which its influence is bounded, and beyond which it is no evidence on noise.
-_BOUND_SCORE = 2.0
-_OUTLIER_SCORE = 3.5
 _STEP_LIMIT = 0.2
 _ITERATIONS = 60
+#: Steps with bounded influence before far runs lose theirs altogether: a poor start must not choose its outliers.
 _BOUNDED_FIRST = 5
 #: Settled: a step of a two-hundredth of the standard uncertainty, and the noise variance known to 1 %.
 _SETTLED_STEP, _SETTLED_NOISE = 5e-3, 1e-2
 
 Status = Literal["converged", "not converged", "outside maps"]
-
-
-class Stack(Protocol):
-    """Runs that can be predicted together: closure maps, or counts."""
-
-    def predict(self, parameters: Float) -> Prediction: ...
-
-    def inside(self, parameters: Float) -> Bool: ...
 
 
 @dataclass(frozen=True)
@@ -132,33 +117,6 @@ class Fit:
         return np.asarray(forward @ self.covariance @ forward.T)
 
 
-@dataclass
-class _State:
-    """Where the iteration stands."""
-
-    quantities: Float
-    rolling: float
-    spread: float = 0.0
-    step: Float = field(default_factory=lambda: np.full(3, np.inf))
-
-
-@dataclass(frozen=True)
-class _Linear:
-    """The runs, linearised at one point: residuals e (n, 4), Jacobian j (n, 4, 3), noise and spread per unit (n, 4,
-    4).
-    """
-
-    e: Float
-    j: Float
-    noise: Float
-    own: Float
-    count: Float
-
-    @property
-    def spread(self) -> Float:
-        return np.asarray(self.j @ _SPREAD_SHAPE @ self.j.transpose(0, 2, 1))
-
-
 def fit(
     stack: Stack,
     closures: Closures,
@@ -188,211 +146,165 @@ def fit(
     """
     if len(closures) == 0:
         raise ValueError("a fit needs at least one run")
-    free = np.ones(3, dtype=np.bool_) if hold is None else ~hold.which
     start_quantities = to_quantities(start)
     if hold is not None:
         start_quantities = np.where(hold.which, hold.quantities, start_quantities)
-    state = _State(start_quantities.copy(), 4.0 * rolling_guess_m)
-    status: Status = "not converged"
-    for iteration in range(_ITERATIONS):
-        if not bool(np.all(stack.inside(to_parameters(state.quantities)))):
-            status = "outside maps"
-            break
-        linear = _linearise(stack, closures, state.quantities)
-        inverse, distance = _whiten(linear, state)
-        weight = _weights(distance, linear.count, bounded=iteration < _BOUNDED_FIRST)
-        information, gradient = _normal_equations(linear, inverse, weight)
-        information += np.diag(_WEAK_SD**-2)
-        gradient += (start_quantities - state.quantities) / _WEAK_SD**2
-        state.step = _step(information, gradient, free)
-        state.quantities = state.quantities + state.step
-        moved = _update_noise(linear, inverse, weight, information, state, rolling_guess_m)
-        sigma = np.sqrt(np.diag(np.linalg.inv(information)))
-        settled = bool(np.all(np.abs(state.step) <= _SETTLED_STEP * sigma + 1e-12)) and moved < _SETTLED_NOISE
-        if settled and iteration >= _BOUNDED_FIRST:
-            if state.spread == 0.0 and _spread_wanted(linear, inverse, weight, information, state):
-                state.spread = 1e-8
-                continue
-            status = "converged"
-            break
-    return _summarise(stack, closures, state, status, hold)
+    model = _Misclosures(stack, closures, start_quantities, hold, rolling_guess_m)
+    if not bool(np.all(stack.inside(to_parameters(start_quantities)))):
+        return _summarise(model, "outside maps")
+    try:
+        end = gauss_newton(model, model.at, _SETTLED_STEP, _STEP_LIMIT, _ITERATIONS)
+    except _OutsideMapsError:
+        return _summarise(model, "outside maps")
+    return _summarise(model, "converged" if end.converged else "not converged")
 
 
-def _linearise(stack: Stack, closures: Closures, quantities: Float) -> _Linear:
-    parameters = to_parameters(quantities)
-    prediction = stack.predict(parameters)
-    component = component_jacobian(prediction.pose)
-    rows = component * closures.present[:, :, None]
-    to_relative = relative_from_quantities(float(quantities[1]))
-    j = rows @ (prediction.jacobian @ (parameters[:, None] * to_relative))
-    noise = rows @ prediction.noise @ rows.transpose(0, 2, 1)
-    own = misclosure_covariance(closures, np.zeros((len(closures), 3, 3)), component)
-    return _Linear(
-        misclosure(closures, prediction.pose), j, noise, own, closures.present.sum(axis=1).astype(np.float64)
-    )
+class _OutsideMapsError(Exception):
+    """A step led out of the box of a map."""
 
 
-def _whiten(linear: _Linear, state: _State) -> tuple[Float, Float]:
-    """Inverse covariances (n, 4, 4) and squared Mahalanobis distances (n,)."""
-    covariance = linear.own + state.rolling * linear.noise
-    if state.spread > 0.0:
-        covariance = covariance + state.spread * linear.spread
-    inverse = np.asarray(np.linalg.inv(covariance), dtype=np.float64)
-    return inverse, np.asarray(np.einsum("ni,nij,nj->n", linear.e, inverse, linear.e))
+class _Misclosures:
+    """The runs as the least-squares machinery sees them: whitened, weighed, and held weakly at the start."""
+
+    def __init__(self, stack: Stack, closures: Closures, start: Float, hold: Hold | None, guess: float) -> None:
+        self.stack = stack
+        self.closures = closures
+        self.start = start
+        self.hold = hold
+        self.free = np.ones(3, dtype=np.bool_) if hold is None else ~hold.which
+        self.parts = VarianceParts(guess, rolling=4.0 * guess)
+        self.rounds = 0
+        self.at = start[self.free]
+        self.runs = linearise(stack, closures, start)
+        self.whitener, self.weight = self._weigh(bounded=True)
+
+    @property
+    def quantities(self) -> Float:
+        """All three where the runs are linearised."""
+        return self._all(self.at)
+
+    def _all(self, at: Float) -> Float:
+        quantities = self.start.copy()
+        quantities[self.free] = at
+        return quantities
+
+    def _move(self, at: Float) -> None:
+        """Linearise again, only where the point has moved."""
+        if np.array_equal(at, self.at):
+            return
+        quantities = self._all(at)
+        if not bool(np.all(self.stack.inside(to_parameters(quantities)))):
+            raise _OutsideMapsError
+        self.runs, self.at = linearise(self.stack, self.closures, quantities), at.copy()
+
+    def _weigh(self, bounded: bool) -> tuple[Float, Float]:
+        """Whiteners (n, 4, 4) and weights (n,) where the runs are linearised."""
+        whiteners = self.runs.whitener(self.parts.rolling, self.parts.spread)
+        distance = (np.einsum("nij,nj->ni", whiteners, self.runs.e) ** 2).sum(axis=1)
+        return whiteners, robust_weight(distance, self.runs.count, bounded)
+
+    def residual(self, at: Float) -> Float:
+        """Whitened, weighed misclosures, and how far the start is away."""
+        self._move(at)
+        white = np.einsum("nij,nj->ni", self.whitener, self.runs.e) * np.sqrt(self.weight)[:, None]
+        return np.concatenate([white.ravel(), ((self.start - self.quantities) / _WEAK_SD)[self.free]])
+
+    def jacobian(self, at: Float) -> Float:
+        """Of the free quantities."""
+        self._move(at)
+        used = np.concatenate([np.ones(4 * self.weight.size, dtype=np.bool_), self.free])
+        return np.asarray(self.rows()[used][:, self.free])
+
+    def rows(self) -> Float:
+        """Whitened, weighed derivatives of all three quantities, and the weak hold of each: (4 n + 3, 3)."""
+        white = (self.whitener @ self.runs.j) * np.sqrt(self.weight)[:, None, None]
+        return np.concatenate([white.reshape(-1, 3), np.diag(1.0 / _WEAK_SD)])
+
+    def settle(self, at: Float, solution: Solution, still: bool) -> bool:
+        """Move the variances by one step, and the weights with them."""
+        self._move(at)
+        self.rounds += 1
+        seen = Whitened(self.runs, self.whitener, self.weight, self.root(solution))
+        moved = self.parts.step(seen)
+        stand = still and moved < _SETTLED_NOISE and self.rounds > _BOUNDED_FIRST
+        stand = stand and not self.parts.take_up_spread(seen)
+        self.whitener, self.weight = self._weigh(bounded=self.rounds < _BOUNDED_FIRST)
+        return stand
+
+    def root(self, solution: Solution) -> Float:
+        """Root (3, p) of the covariance of all three quantities, those held without any."""
+        root = np.zeros((3, solution.root.shape[1]))
+        root[self.free] = solution.root
+        return root
 
 
-def normal_score(squared_distance: Float, count: Float) -> Float:
-    """Wilson-Hilferty score of a squared distance with ``count`` components: standard normal for a good run."""
-    variance = 2.0 / (9.0 * count)
-    return np.asarray((np.cbrt(squared_distance / count) - (1.0 - variance)) / np.sqrt(variance))
-
-
-def _weights(squared_distance: Float, count: Float, bounded: bool) -> Float:
-    """One within the bound; outside it, falling with the distance (bounded influence), later with its square
-    (redescending).
-    """
-    variance = 2.0 / (9.0 * count)
-    bound = count * (1.0 - variance + _BOUND_SCORE * np.sqrt(variance)) ** 3
-    ratio = np.minimum(1.0, bound / np.maximum(squared_distance, 1e-300))
-    return np.sqrt(ratio) if bounded else ratio
-
-
-def _normal_equations(linear: _Linear, inverse: Float, weight: Float) -> tuple[Float, Float]:
-    weighted = linear.j.transpose(0, 2, 1) @ (inverse * weight[:, None, None])
-    return (weighted @ linear.j).sum(axis=0), np.einsum("nij,nj->i", weighted, linear.e)
-
-
-def _step(information: Float, gradient: Float, free: Bool) -> Float:
-    step = np.zeros(3)
-    step[free] = np.linalg.solve(information[np.ix_(free, free)], gradient[free])
-    return np.clip(step, -_STEP_LIMIT, _STEP_LIMIT)
-
-
-def _scores(
-    linear: _Linear, inverse: Float, weight: Float, information: Float, state: _State, parts: tuple[Float, ...]
-) -> tuple[Float, Float]:
-    """Restricted score and Fisher information of the variance parts, from the runs that fit."""
-    residual = linear.e - linear.j @ state.step
-    white = np.einsum("nij,nj->ni", inverse, residual)
-    distance = np.einsum("ni,ni->n", residual, white)
-    fits = (normal_score(distance, linear.count) < _OUTLIER_SCORE).astype(np.float64)
-    projected = inverse @ linear.j
-    parameter_covariance = np.linalg.inv(information)
-    score = np.empty(len(parts))
-    products = [inverse @ part for part in parts]
-    for index, part in enumerate(parts):
-        quadratic = np.einsum("ni,nij,nj->n", white, part, white) * weight
-        trace = np.einsum("nii->n", products[index])
-        back = projected.transpose(0, 2, 1) @ part @ projected
-        correction = np.einsum("ij,nji->n", parameter_covariance, back) * weight
-        score[index] = 0.5 * float((fits * (quadratic - trace + correction)).sum())
-    fisher = np.array([[0.5 * float((fits * np.einsum("nij,nji->n", x, y)).sum()) for y in products] for x in products])
-    return score, fisher
-
-
-def _update_noise(
-    linear: _Linear, inverse: Float, weight: Float, information: Float, state: _State, guess: float
-) -> float:
-    """One scoring step on ln q (held loosely at its guess) and, where in use, on ln of the spread; answers how far it
-    moved.
-    """
-    parts = (linear.noise,) if state.spread == 0.0 else (linear.noise, linear.spread)
-    values = np.array([state.rolling, state.spread][: len(parts)])
-    score, fisher = _scores(linear, inverse, weight, information, state, parts)
-    gradient, curvature = score * values, fisher * np.outer(values, values)
-    gradient[0] -= np.log(state.rolling / guess) / _ROLLING_PRIOR_SD**2
-    curvature[0, 0] += 1.0 / _ROLLING_PRIOR_SD**2
-    if len(parts) == 2:
-        curvature[1, 1] += 1e-3
-    step = np.clip(np.linalg.solve(curvature, gradient), -1.0, 1.0)
-    state.rolling = float(state.rolling * np.exp(step[0]))
-    if len(parts) == 2:
-        state.spread = float(state.spread * np.exp(step[1]))
-    return float(np.abs(step).max())
-
-
-def _spread_wanted(linear: _Linear, inverse: Float, weight: Float, information: Float, state: _State) -> bool:
-    """Score test for spread from run to run at none, with the rolling noise as nuisance."""
-    if linear.count.size < _SPREAD_MIN_RUNS:
-        return False
-    score, fisher = _scores(linear, inverse, weight, information, state, (linear.noise, linear.spread))
-    remaining = fisher[1, 1] - fisher[0, 1] ** 2 / max(fisher[0, 0], 1e-300)
-    return bool(remaining > 0.0 and score[1] / np.sqrt(remaining) > _SPREAD_SCORE)
-
-
-def _summarise(stack: Stack, closures: Closures, state: _State, status: Status, hold: Hold | None) -> Fit:
-    linear = _linearise(stack, closures, state.quantities)
-    inverse, distance = _whiten(linear, state)
-    weight = _weights(distance, linear.count, bounded=False)
-    information, _ = _normal_equations(linear, inverse, weight)
-    full = information + np.diag(_WEAK_SD**-2)
-    free = np.ones(3, dtype=np.bool_) if hold is None else ~hold.which
-    degrees = float((weight * linear.count).sum()) - float(free.sum())
-    weighted = float((weight * distance).sum())
+def _summarise(model: _Misclosures, status: Status) -> Fit:
+    model.whitener, model.weight = model._weigh(bounded=False)
+    rows, weight, runs = model.rows(), model.weight, model.runs
+    white = np.einsum("nij,nj->ni", model.whitener, runs.e)
+    distance = (white**2).sum(axis=1)
+    solution = solve(model.jacobian(model.at), model.residual(model.at))
+    weighted = float(weight @ distance)
+    degrees = float(weight @ runs.count) - float(model.free.sum())
     birge = float(np.sqrt(weighted / degrees)) if degrees >= 1.0 else None
-    effective = min(degrees, _satterthwaite_degrees(linear, inverse, weight, full, state.rolling))
-    scale = max(1.0, birge**2) if birge is not None else 1.0
-    log_determinants = float(np.log(np.linalg.det(inverse)).sum() + linear.count @ np.log(weight))
+    root = model.root(solution)
+    effective = min(degrees, _satterthwaite_degrees(Whitened(runs, model.whitener, weight, root), model.parts))
+    log_determinants = 2.0 * float(np.log(np.einsum("nii->ni", model.whitener)).sum()) + float(
+        runs.count @ np.log(weight)
+    )
+    to_relative = relative_from_quantities(float(model.quantities[1]))
     return Fit(
         status=status,
-        parameters=to_parameters(state.quantities),
-        covariance=_covariance(full, scale, hold),
-        rolling_noise_m=state.rolling,
-        spread=float(np.sqrt(state.spread)),
+        parameters=to_parameters(model.quantities),
+        covariance=_covariance(rows, root, max(1.0, birge**2) if birge is not None else 1.0, model.hold),
+        rolling_noise_m=model.parts.rolling,
+        spread=float(np.sqrt(model.parts.spread)),
         birge_ratio=birge,
         coverage_factor=float(stdtrit(max(1.0, effective), 0.975)),
         degrees_of_freedom=effective,
         weight=weight,
-        residual=linear.e,
-        normalised=normal_score(distance, linear.count),
-        influence=_influence(linear, inverse, weight, full, free)
-        @ relative_from_quantities(float(state.quantities[1])).T,
-        deviance=float(np.linalg.slogdet(full)[1]) + weighted - log_determinants,
+        residual=runs.e,
+        normalised=normal_score(distance, runs.count),
+        influence=_influence(rows, white * np.sqrt(weight)[:, None], model.free) @ to_relative.T,
+        deviance=float(np.linalg.slogdet(rows.T @ rows)[1]) + weighted - log_determinants,
     )
 
 
-def _satterthwaite_degrees(linear: _Linear, inverse: Float, weight: Float, information: Float, rolling: float) -> float:
+def _satterthwaite_degrees(at: Whitened, parts: VarianceParts) -> float:
     """Degrees of freedom of the least certain variance, from how far it follows an uncertain q.
 
     Why this form: with a known closure uncertainty a dozen runs fix the parameters far better than the noise between
-    the
-    marks, and a normal interval would pretend that q is known. The variance of ln q is the inverse of its Fisher
+    the marks, and a normal interval would pretend that q is known. The variance of ln q is the inverse of its
     information (Satterthwaite 1946: degrees = 2 var^2 / variance of var).
     """
-    covariance = np.linalg.inv(information)
-    projected = inverse @ linear.j
-    part = rolling * linear.noise
-    follows = ((projected.transpose(0, 2, 1) @ part @ projected) * weight[:, None, None]).sum(axis=0)
-    share = np.diag(covariance @ follows @ covariance) / np.diag(covariance)
-    product = inverse @ part
-    fisher = 0.5 * float(np.einsum("nij,nji->", product, product)) + _ROLLING_PRIOR_SD**-2
-    return float(2.0 * fisher / max(float(share.max()) ** 2, 1e-12))
+    part = at.whitener @ (parts.rolling * at.runs.noise) @ at.whitener.transpose(0, 2, 1)
+    uncertain = at.whitener @ at.runs.j @ at.root
+    follows = ((uncertain.transpose(0, 2, 1) @ part @ uncertain) * at.weight[:, None, None]).sum(axis=0)
+    variance = np.einsum("ij,ij->i", at.root, at.root)
+    free = variance > 0.0
+    share = np.einsum("ij,jk,ik->i", at.root, follows, at.root)[free] / variance[free]
+    information = 0.5 * float(np.einsum("nij,nij->", part, part)) + ROLLING_PRIOR_SD**-2
+    return float(2.0 * information / max(float(share.max(initial=0.0)) ** 2, 1e-12))
 
 
-def _covariance(information: Float, scale: float, hold: Hold | None) -> Float:
-    """Inverse information; held quantities keep their own covariance and pass it on to the free ones."""
+def _covariance(rows: Float, root: Float, scale: float, hold: Hold | None) -> Float:
+    """Of the quantities (3, 3); those held keep their own covariance and pass it on to the free ones."""
+    covariance = scale * (root @ root.T)
     if hold is None:
-        return np.asarray(scale * np.linalg.inv(information))
-    held, free = np.flatnonzero(hold.which), np.flatnonzero(~hold.which)
-    covariance = np.zeros((3, 3))
-    held_covariance = hold.covariance[np.ix_(held, held)]
-    covariance[np.ix_(held, held)] = held_covariance
-    if free.size:
-        inner = np.linalg.inv(information[np.ix_(free, free)])
-        passed = -inner @ information[np.ix_(free, held)]
-        covariance[np.ix_(free, free)] = scale * inner + passed @ held_covariance @ passed.T
-        covariance[np.ix_(free, held)] = passed @ held_covariance
-        covariance[np.ix_(held, free)] = covariance[np.ix_(free, held)].T
-    return covariance
+        return np.asarray(covariance)
+    held = np.where(np.outer(hold.which, hold.which), hold.covariance, 0.0)
+    passed = np.diag(hold.which.astype(np.float64)) - root @ (root.T @ (rows.T @ rows))
+    return np.asarray(covariance + passed @ held @ passed.T)
 
 
-def _influence(linear: _Linear, inverse: Float, weight: Float, information: Float, free: Bool) -> Float:
+def _influence(rows: Float, white: Float, free: Bool) -> Float:
     """Change (n, 3) of the quantities without each run: one Newton step on the remaining ones."""
-    weighted = linear.j.transpose(0, 2, 1) @ (inverse * weight[:, None, None])
-    own_information, own_gradient = weighted @ linear.j, np.einsum("nij,nj->ni", weighted, linear.e)
-    rest = (information[None] - own_information)[:, free][:, :, free]
-    result = np.zeros((linear.e.shape[0], 3))
-    result[:, free] = np.linalg.solve(rest, -own_gradient[:, free, None])[:, :, 0]
+    count = white.shape[0]
+    own = rows[: 4 * count].reshape(count, 4, 3)[:, :, free]
+    information = (rows.T @ rows)[np.ix_(free, free)]
+    rest = information - own.transpose(0, 2, 1) @ own
+    result = np.zeros((count, 3))
+    result[:, free] = np.linalg.solve(rest, -(own.transpose(0, 2, 1) @ white[:, :, None]))[:, :, 0]
     return result
 
 
@@ -411,11 +323,10 @@ def scores_against(
     rolling_noise_m : float
         Square metres per metre.
     """
-    linear = _linearise(stack, closures, to_quantities(parameters))
-    known = linear.j @ covariance @ linear.j.transpose(0, 2, 1)
-    inverse = np.linalg.inv(linear.own + rolling_noise_m * linear.noise + known)
-    distance = np.asarray(np.einsum("ni,nij,nj->n", linear.e, inverse, linear.e))
-    return normal_score(distance, linear.count)
+    runs = linearise(stack, closures, to_quantities(parameters))
+    known = runs.j @ covariance @ runs.j.transpose(0, 2, 1)
+    white = np.einsum("nij,nj->ni", whitener(runs.own + rolling_noise_m * runs.noise + known), runs.e)
+    return normal_score((white**2).sum(axis=1), runs.count)
 
 
 def misclosures(stack: Stack, closures: Closures, parameters: Float) -> Float:
