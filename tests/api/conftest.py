@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import shutil
 from dataclasses import dataclass, replace
-from datetime import timedelta
 from itertools import count
 from pathlib import Path
 from typing import Any
@@ -20,7 +19,7 @@ from registry.procedures.registration import put_vehicle
 from registry.services import Services
 from tests.conftest import StandingClock, services_in
 
-from .calling import COURSES, ENTERED, ROLES, VEHICLE, Caller, run
+from .calling import ENTERED, ROLES, VEHICLE, Caller, record_runs
 
 
 @dataclass(frozen=True)
@@ -71,13 +70,8 @@ def call(app, first_home, document) -> Caller:
 
 @pytest.fixture
 def calibration_runs(call, clock) -> list[dict[str, Any]]:
-    """Runs of LC-07 that determine every quantity, recorded in the hours before noon."""
-    recorded = []
-    for index, course in enumerate([*COURSES, *COURSES]):
-        started_at = clock.time - timedelta(hours=1 + index / 4)
-        body = run(course, started_at, jitter_mm=(-1.0, 0.5, 1.5)[index % 3])
-        recorded.append(call.ok("POST", "/vehicles/LC-07/runs", "LC-07", body))
-    return recorded
+    """Runs of LC-07 that determine every quantity, driven in the hours before now."""
+    return record_runs(call, clock.time)
 
 
 @pytest.fixture
