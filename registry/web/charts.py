@@ -126,7 +126,10 @@ def _value(field: str) -> alt.Y:
 
 
 def _corridor_layers(history: History, inks: Inks) -> list[alt.Chart]:
-    base = alt.Chart(_rows([_corridor_row(corridor) for corridor in history.corridors]))
+    rows = [_corridor_row(corridor) for corridor in history.corridors]
+    if not rows:
+        return []
+    base = alt.Chart(_rows(rows))
     band = base.mark_rect(color=inks.corridor, opacity=1).encode(
         x=_time("from"), x2="to", y=_value("low"), y2="high", tooltip=[alt.Tooltip("said:N", title=" ")]
     )
@@ -136,39 +139,46 @@ def _corridor_layers(history: History, inks: Inks) -> list[alt.Chart]:
 
 def _event_layers(history: History, inks: Inks) -> list[alt.Chart]:
     tips = [alt.Tooltip("said:N", title=" "), alt.Tooltip("day:N", title="on")]
-    adoptions = alt.Chart(_rows([_event_row(event) for event in history.events if event.kind == "adoption"]))
-    works = alt.Chart(_rows([_event_row(event) for event in history.events if event.kind == "maintenance"]))
-    top, bottom = alt.value(0), alt.value(HISTORY_HEIGHT)
-    return [
-        adoptions.mark_rule(color=inks.soft, strokeWidth=1).encode(x=_time("at"), tooltip=tips),
-        adoptions.mark_text(color=inks.ink, align="left", baseline="top", dx=4, dy=3, fontSize=12, font=FONT).encode(
-            x=_time("at"), y=top, text="label:N"
-        ),
-        works.mark_rule(color=inks.ink, strokeWidth=1.5, strokeDash=[2, 3]).encode(x=_time("at"), tooltip=tips),
-        works.mark_point(color=inks.ink, shape="diamond", filled=True, opacity=1, size=90, yOffset=-6).encode(
-            x=_time("at"), y=bottom, tooltip=tips
-        ),
-    ]
+    layers: list[alt.Chart] = []
+    adopted = [_event_row(event) for event in history.events if event.kind == "adoption"]
+    if adopted:
+        base = alt.Chart(_rows(adopted))
+        number = base.mark_text(color=inks.ink, align="left", baseline="top", dx=4, dy=3, fontSize=12, font=FONT)
+        layers.append(base.mark_rule(color=inks.soft, strokeWidth=1).encode(x=_time("at"), tooltip=tips))
+        layers.append(number.encode(x=_time("at"), y=alt.value(0), text="label:N"))
+    worked = [_event_row(event) for event in history.events if event.kind == "maintenance"]
+    if worked:
+        base = alt.Chart(_rows(worked))
+        line = base.mark_rule(color=inks.ink, strokeWidth=1.5, strokeDash=[2, 3])
+        lozenge = base.mark_point(color=inks.ink, shape="diamond", filled=True, opacity=1, size=90, yOffset=-6)
+        layers.append(line.encode(x=_time("at"), tooltip=tips))
+        layers.append(lozenge.encode(x=_time("at"), y=alt.value(HISTORY_HEIGHT), tooltip=tips))
+    return layers
 
 
 def _estimate_layers(history: History, inks: Inks) -> list[alt.Chart]:
     rows = _point_rows(history)
+    if not rows:
+        return []
     base = alt.Chart(_rows(rows))
-    # A band needs two points: one that stands alone shows its interval as a whisker.
-    sizes = Counter(row["stretch"] for row in rows)
-    lone = alt.Chart(_rows([row for row in rows if sizes[row["stretch"]] == 1]))
     tips = [
         alt.Tooltip("day:N", title="evaluated"),
         alt.Tooltip("said:N", title=history.title.lower()),
         alt.Tooltip("runs:Q", title="runs"),
     ]
     low, value = _value("low"), _value("value")
-    return [
+    layers = [
         base.mark_area(color=inks.ink, opacity=0.16).encode(x=_time("at"), y=low, y2="high", detail="stretch:N"),
-        lone.mark_rule(color=inks.ink, opacity=0.4, strokeWidth=1.5).encode(x=_time("at"), y=low, y2="high"),
         base.mark_line(color=inks.ink, strokeWidth=1.5).encode(x=_time("at"), y=value, detail="stretch:N"),
         base.mark_point(color=inks.ink, filled=True, opacity=1, size=26).encode(x=_time("at"), y=value, tooltip=tips),
     ]
+    # A band needs two points: one that stands alone shows its interval as a whisker.
+    sizes = Counter(row["stretch"] for row in rows)
+    lone = [row for row in rows if sizes[row["stretch"]] == 1]
+    if lone:
+        whisker = alt.Chart(_rows(lone)).mark_rule(color=inks.ink, opacity=0.4, strokeWidth=1.5)
+        layers.append(whisker.encode(x=_time("at"), y=low, y2="high"))
+    return layers
 
 
 def history_chart(history: History, shade: Shade, width: int) -> Document:
@@ -182,7 +192,14 @@ def history_chart(history: History, shade: Shade, width: int) -> Document:
         Light or dark inks.
     width
         Width of the plot in pixels; held to what a page may ask for.
+
+    Raises
+    ------
+    ValueError
+        The history has nothing to draw; see `History.drawable`.
     """
+    if not history.drawable:
+        raise ValueError("the history has nothing to draw")
     inks = INKS[shade]
     layers = [*_corridor_layers(history, inks), *_event_layers(history, inks), *_estimate_layers(history, inks)]
     told = sum(point.value is not None for point in history.points)

@@ -77,6 +77,11 @@ class History:
         return LINE_WORDS[self.line]
 
     @property
+    def drawable(self) -> bool:
+        """Whether there is a value to draw at all: a corridor, or an estimate."""
+        return bool(self.corridors) or any(point.value is not None for point in self.points)
+
+    @property
     def unit(self) -> str:
         return LINE_UNITS[self.line]
 

@@ -21,7 +21,7 @@ from wtforms.validators import ValidationError
 
 from registry.domain.person import Person
 from registry.errors import Malformed
-from registry.procedures import people as procedures
+from registry.procedures.people import check_password
 from registry.storage import people
 from registry.web.current import services
 from registry.web.forms import SignInForm
@@ -152,7 +152,7 @@ def _sign_in(tries: Tries) -> Callable[[], BaseResponse]:
             response = _sign_in_page(form, 429)
             response.headers["Retry-After"] = "60"
             return response
-        person = procedures.check_password(services(), name, form.password.data or "")
+        person = check_password(services(), name, form.password.data or "")
         if person is None:
             tries.failed(name)
             form.problem = "Name and password do not belong together. Check both; capitals count."

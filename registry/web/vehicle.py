@@ -179,6 +179,8 @@ def _drawn(vehicle_id: str, line: str) -> Document:
         abort(404)
     with services().read() as c:
         history = history_of(known, past_of(c, vehicle_id))
+    if not history.drawable:
+        abort(404)
     return history_chart(history, *shade_and_width())
 
 

@@ -1,8 +1,8 @@
 """A small yard of vehicles for the pages to show, lived through by the real procedures.
 
-``tub-7`` has a past: two calibrations, evaluations that end beyond tolerance, an open proposal, maintenance, boots, a run
-and an alert. ``tub-8`` is new. Evaluations are put on the record as they would come from a pass, so that each state of a
-strip is there whatever the fit thinks.
+``tub-7`` has a past: two calibrations, evaluations that end beyond tolerance, an open proposal, maintenance, boots, a
+run and an alert. ``tub-8`` is new. Evaluations are put on the record as they would come from a pass, so that each state
+of a strip is there whatever the fit thinks.
 """
 
 from __future__ import annotations
