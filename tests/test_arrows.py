@@ -43,7 +43,10 @@ KEPT_TO: dict[str, tuple[tuple[str, ...], str]] = {
     "alembic": (("registry/storage/schema.py", "migrations/"), "a line about revisions: storage/schema.py"),
     "apscheduler": (("registry/jobs/scheduler.py",), "a line that would change with the schedule: jobs/scheduler.py"),
     "uuid": (("registry/clock.py",), "a fresh identity: services.new_id, made in clock.py"),
-    "flask": (("registry/api/", "registry/web/", "registry/app.py", "registry/commands/"), "a line that would change with a URL: api or web"),
+    "flask": (
+        ("registry/api/", "registry/web/", "registry/app.py", "registry/commands/"),
+        "a line that would change with a URL: api or web",
+    ),
     "flask_openapi3": (("registry/api/",), "a line that would change with a JSON field: api"),
     "pydantic": (("registry/api/", "registry/commands/"), "a line that would change with a JSON field: api"),
     "altair": (("registry/web/",), "a line that would change only with the look: web"),

@@ -15,7 +15,7 @@ from contextlib import closing, contextmanager
 from pathlib import Path
 from typing import Any
 
-from sqlalchemy import Connection, Engine, create_engine, event
+from sqlalchemy import Connection, Engine, create_engine, event, make_url
 from sqlalchemy.exc import DBAPIError as DatabaseError
 from sqlalchemy.exc import OperationalError
 
@@ -39,9 +39,9 @@ def make_engine(url: str) -> Engine:
         For an in-memory SQLite database, which would be another one in every thread.
     """
     if url.startswith("sqlite"):
-        engine = create_engine(url, connect_args={"isolation_level": None, "timeout": BUSY_TIMEOUT_S}, max_overflow=30)
-        if engine.url.database in (None, "", ":memory:"):
+        if make_url(url).database in (None, "", ":memory:"):
             raise ValueError("an in-memory database is another one in every thread: name a file")
+        engine = create_engine(url, connect_args={"isolation_level": None, "timeout": BUSY_TIMEOUT_S}, max_overflow=30)
         event.listen(engine, "connect", _prepare_sqlite)
         return engine
     return create_engine(url, max_overflow=30, pool_pre_ping=True)

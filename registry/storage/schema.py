@@ -13,7 +13,8 @@ from sqlalchemy import Connection, Engine
 import migrations
 
 
-def _config() -> Config:
+def alembic_config() -> Config:
+    """Where the revisions are, for alembic."""
     config = Config()
     config.set_main_option("script_location", str(Path(migrations.__file__).parent).replace("%", "%%"))
     return config
@@ -21,7 +22,7 @@ def _config() -> Config:
 
 def head_revision() -> str:
     """The newest revision that this program knows."""
-    head = ScriptDirectory.from_config(_config()).get_current_head()
+    head = ScriptDirectory.from_config(alembic_config()).get_current_head()
     if head is None:
         raise RuntimeError("the migrations folder holds no revision")
     return head
@@ -43,7 +44,7 @@ def migrate(engine: Engine) -> list[str]:
     list of str
         Rows whose foreign keys point nowhere; when there are any, nothing was changed.
     """
-    config = _config()
+    config = alembic_config()
     sqlite = engine.dialect.name == "sqlite"
     with engine.connect() as c:
         if sqlite:
