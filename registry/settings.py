@@ -55,15 +55,16 @@ class Settings:
         """
         variables = os.environ
         folder = (home or Path(variables.get("ROLLBOOK_HOME") or "rollbook-home")).expanduser().absolute()
+        elsewhere = variables.get("ROLLBOOK_DATABASE_URL")
         if create:
             folder.mkdir(parents=True, exist_ok=True)
-        elif not folder.is_dir():
+        elif not (folder.is_dir() if elsewhere else (folder / "rollbook.db").is_file()):
             raise Unready(
                 f"there is no home at {folder}: name it with --home or ROLLBOOK_HOME, or run 'rollbook migrate'"
             )
         return cls(
             home=folder,
-            database_url=variables.get("ROLLBOOK_DATABASE_URL") or sqlite_url(folder),
+            database_url=elsewhere or sqlite_url(folder),
             secret_key=variables.get("ROLLBOOK_SECRET_KEY") or _kept_secret(folder),
             evaluate_every_s=_read(variables, "ROLLBOOK_EVALUATE_EVERY", duration_s, 6 * 3600.0),
             window_runs=_read(variables, "ROLLBOOK_WINDOW_RUNS", _whole_from(3), 60),

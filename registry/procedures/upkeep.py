@@ -36,6 +36,12 @@ def migrate(services: Services) -> str:
     return schema.head_revision()
 
 
+def is_empty(services: Services) -> bool:
+    """Whether there is no schema yet."""
+    with services.read() as c:
+        return schema.current_revision(c) is None
+
+
 def require_ready(services: Services) -> None:
     """Refuse to work on a database that is not at the newest revision.
 
