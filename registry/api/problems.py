@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import traceback
 from collections.abc import Iterable
 from http import HTTPStatus
 from typing import Any
@@ -119,7 +120,9 @@ def answer(error: Exception) -> BaseResponse:
         return _of_refusal(error)
     if isinstance(error, HTTPException):
         return _of_http(error)
-    _log.error("request failed", method=request.method, path=request.path, exc_info=error)
+    # Written out here, because a log that prints local variables too would print keys.
+    told = "".join(traceback.format_exception(error))
+    _log.error("request failed", method=request.method, path=request.path, exception=told)
     return _document(
         HTTPStatus.INTERNAL_SERVER_ERROR, "fault", "A fault of the program", "It has been logged. Try again."
     )
@@ -155,6 +158,8 @@ def _of_refusal(error: Refusal) -> BaseResponse:
     kind = next(known for known in type(error).__mro__ if known in TABLE)
     status, slug, title = TABLE[kind]
     more: dict[str, Any] = {}
+    if isinstance(error, Unready):
+        _log.warning("not ready", path=request.path, detail=error.detail, cause=repr(error.__cause__))
     if isinstance(error, NothingInForce):
         more["withdrawn_numbers"] = list(error.withdrawn_numbers)
     response = _document(status, slug, title, error.detail, error.errors, more)

@@ -232,5 +232,10 @@ class StrictRequest(Request):
         """
         if self._strict_json is None:
             data = self.get_data(cache=False)
+            if self.content_length is None and len(data) >= MAX_BODY_BYTES:
+                # A body that does not say its length is cut at the limit without a word.
+                raise TooLarge(
+                    f"the body is longer than {MAX_BODY_BYTES // 1_000_000} MB: gzip it, or send shorter runs"
+                )
             self._strict_json = parsed(unpacked(data, self.headers.get("Content-Encoding", "")))
         return self._strict_json
