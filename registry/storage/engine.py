@@ -57,8 +57,14 @@ def _prepare_sqlite(connection: sqlite3.Connection, _record: Any) -> None:
 
 @contextmanager
 def reading(engine: Engine) -> Iterator[Connection]:
-    """A transaction that sees one state of the record throughout."""
-    with engine.connect() as c, c.begin() as transaction:
+    """A transaction that sees one state of the record throughout.
+
+    Raises
+    ------
+    Unready
+        The database cannot be reached.
+    """
+    with _connected(engine) as c, c.begin() as transaction:
         if c.dialect.name == "sqlite":
             c.exec_driver_sql("BEGIN")
         else:
@@ -76,18 +82,25 @@ def writing(engine: Engine) -> Iterator[Connection]:
     RuntimeError
         When this thread is already writing: it would wait for itself.
     Unready
-        When another process has held the write lock for too long.
+        When another process has held the write lock for too long, or the database cannot be reached.
     """
     held: set[int] = _writing_in.__dict__.setdefault("engines", set())
     if id(engine) in held:
         raise RuntimeError("a writing transaction was begun inside another one of the same thread")
     held.add(id(engine))
     try:
-        with engine.connect() as c, c.begin():
+        with _connected(engine) as c, c.begin():
             _take_write_lock(c)
             yield c
     finally:
         held.discard(id(engine))
+
+
+def _connected(engine: Engine) -> Connection:
+    try:
+        return engine.connect()
+    except OperationalError as error:
+        raise Unready("the database cannot be reached: check ROLLBOOK_DATABASE_URL, or the home and its rights") from error
 
 
 def _take_write_lock(c: Connection) -> None:
