@@ -100,7 +100,7 @@ def _connected(engine: Engine) -> Connection:
     try:
         return engine.connect()
     except OperationalError as error:
-        raise Unready("the database cannot be reached: check ROLLBOOK_DATABASE_URL, or the home and its rights") from error
+        raise Unready("the database cannot be reached: check ROLLBOOK_DATABASE_URL and the home") from error
 
 
 def _take_write_lock(c: Connection) -> None:
