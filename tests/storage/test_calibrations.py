@@ -4,9 +4,10 @@ from dataclasses import replace
 from datetime import timedelta
 
 import pytest
+from sqlalchemy import event
 
 from registry.errors import NotFound
-from registry.storage import calibrations
+from registry.storage import calibrations, vehicles
 from registry.storage.engine import DatabaseError
 
 from .samples import add_runs, result_of, run_of
@@ -39,8 +40,6 @@ def test_a_calibration_comes_back_as_it_was_recorded(with_runs, clock):
 
 
 def test_numbers_count_per_vehicle_from_one(with_runs, clock, statement):
-    from registry.storage import vehicles
-
     with with_runs.write() as c:
         vehicles.add_version(c, "tub-8", statement, clock(), "Abel")
         numbers = [
@@ -92,8 +91,6 @@ def test_what_was_in_force_and_what_was_known_at_any_time(with_runs, clock):
 
 
 def test_what_was_in_force_is_one_query(with_runs, clock):
-    from sqlalchemy import event
-
     add(with_runs, clock, result_of(), "c1")
     put(with_runs, clock, "c1", clock())
     with with_runs.read() as c:

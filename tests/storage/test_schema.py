@@ -10,6 +10,7 @@ import zipfile
 from pathlib import Path
 
 import pytest
+from alembic import command
 from alembic.autogenerate import compare_metadata
 from alembic.migration import MigrationContext
 
@@ -92,8 +93,6 @@ def test_a_row_that_points_nowhere_is_named_and_the_database_left_as_it_is(engin
 
 
 def test_down_and_up_again_ends_where_it_was(engine):
-    from alembic import command
-
     schema.migrate(engine)
     with engine.connect() as c, c.begin():
         c.exec_driver_sql("BEGIN IMMEDIATE")
