@@ -45,6 +45,8 @@ _SAMPLE_TURN_LIMIT_RAD = 0.1
 _GAUSS_ERROR = 1.0 / 4320.0
 #: Share of the wanted error that the Gauss points may take; the Chebyshev degrees get what is left.
 _GAUSS_SHARE = 0.25
+#: Samples are cut so many times in all, and no more: about a second's work.
+_MAX_CUTS = 500_000
 #: Samples whose phase factors are in memory at one time.
 _CHUNK = 2048
 #: Samples in one matrix product: so few that the linear algebra never splits it over threads, whose waiting for one
@@ -112,8 +114,7 @@ def fold(left_ticks: Float, right_ticks: Float, centre: Float, wanted_error_m: f
     half_width = _half_width(left, right)
     advance, turn = _largest(left, right, half_width)
     reach_m = width * float(advance.sum())
-    limit = min(_SAMPLE_TURN_LIMIT_RAD, (_GAUSS_SHARE * wanted_error_m / (_GAUSS_ERROR * max(reach_m, 1e-12))) ** 0.25)
-    parts = np.maximum(1.0, np.ceil(turn / limit))
+    parts = _parts(turn, reach_m, wanted_error_m)
     gauss_error_m = width * _GAUSS_ERROR * float((advance * (turn / parts) ** 4).sum())
     z_common, z_difference = half_width * _reaches(left, right)
     orders, error = _orders(z_common, z_difference, (wanted_error_m - gauss_error_m) / max(reach_m, 1e-12))
@@ -148,6 +149,25 @@ def _largest(left: Float, right: Float, half_width: Float) -> tuple[Float, Float
     double_advance, turn = np.abs(right + left), np.abs(right - left)
     common, difference = 1.0 + half_width[0], half_width[1]
     return 0.5 * (common * double_advance + difference * turn), common * turn + difference * double_advance
+
+
+def _parts(turn: Float, reach_m: float, wanted_error_m: float) -> Float:
+    """Into how many parts each sample is cut, so that two Gauss points a part are enough."""
+    limit = min(_SAMPLE_TURN_LIMIT_RAD, (_GAUSS_SHARE * wanted_error_m / (_GAUSS_ERROR * max(reach_m, 1e-12))) ** 0.25)
+    return np.asarray(np.maximum(1.0, np.ceil(turn / limit)))
+
+
+def is_foldable(left_ticks: Float, right_ticks: Float, centre: Float) -> bool:
+    """Whether :func:`fold` would take these counts in reasonable time.
+
+    A step of a broken counter may turn the vehicle thousands of times between two samples; cutting it into small
+    turns would take minutes and say nothing.
+    """
+    centre = np.asarray(centre, dtype=np.float64)
+    left, right = centre[0] / centre[2] * left_ticks, centre[1] / centre[2] * right_ticks
+    advance, turn = _largest(left, right, _half_width(left, right))
+    parts = _parts(turn, float(centre[2]) * float(advance.sum()), WANTED_ERROR_M)
+    return bool(float((parts - 1.0).sum()) <= _MAX_CUTS)
 
 
 def _nodes(order: int) -> Float:

@@ -91,7 +91,7 @@ def first_impossible_step(
         beyond = np.maximum(np.abs(ticks) - 1.0, 0.0) * factor > max_speed_m_per_s * interval
         if beyond.any():
             index = int(np.argmax(beyond))
-            speed = float(abs(ticks[index]) * factor / interval[index])
+            speed = abs(float(ticks[index])) * factor / float(interval[index])
             found.append(ImpossibleStep("left" if side == "left" else "right", index + 1, speed))
     return min(found, key=lambda step: step.sample, default=None)
 

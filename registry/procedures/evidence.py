@@ -66,6 +66,12 @@ def misclosure_of(row: Float, statement: ClosureStatement) -> Misclosure:
     return Misclosure(*values)
 
 
+def levers_of(versions: Sequence[VehicleVersion]) -> Float:
+    """Reference points (n, 2) in metres, ahead and left of the axle's middle."""
+    points = [version.statement.reference_point for version in versions]
+    return np.array([(point.ahead_m, point.left_m) for point in points]).reshape(len(points), 2)
+
+
 def ticks_of(counts: Counts, bits: int) -> tuple[Float, Float]:
     """Signed increments (n - 1,) of both sides."""
     return counters.increments(counts.left, bits), counters.increments(counts.right, bits)
@@ -83,12 +89,7 @@ class Evidence:
             if run.vehicle_version not in self._versions:
                 version = vehicle_store.by_version(c, run.vehicle_id, run.vehicle_version)
                 self._versions[run.vehicle_version] = version
-        self.levers_m = np.array(
-            [
-                (reference.ahead_m, reference.left_m)
-                for reference in (self._versions[run.vehicle_version].statement.reference_point for run in self.runs)
-            ]
-        ).reshape(len(self.runs), 2)
+        self.levers_m = levers_of([self._versions[run.vehicle_version] for run in self.runs])
 
     def since(self, begin: int) -> Evidence:
         """The runs from one of them on, with what was read of them already."""
