@@ -18,7 +18,8 @@ class Services:
     """What every procedure is handed.
 
     ``read`` and ``write`` answer a transaction to be used in a ``with``; ``write`` commits at its end and rolls back on
-    an exception. There is one writer at a time, so what a writer has read still holds when it writes.
+    an exception. There is one writer at a time, so what a writer has read still holds when it writes. ``close`` gives
+    the kept connections back; the next transaction opens new ones.
     """
 
     settings: Settings
@@ -26,6 +27,7 @@ class Services:
     new_id: Callable[[], str]
     read: Callable[[], AbstractContextManager[Connection]]
     write: Callable[[], AbstractContextManager[Connection]]
+    close: Callable[[], None]
 
 
 def make_services(settings: Settings) -> Services:
@@ -37,4 +39,5 @@ def make_services(settings: Settings) -> Services:
         new_id=clock.new_id,
         read=partial(reading, engine),
         write=partial(writing, engine),
+        close=engine.dispose,
     )

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import shutil
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field, replace
 from datetime import UTC, datetime, timedelta
 from itertools import count
@@ -66,21 +66,27 @@ def services_in(folder: Path, clock: Callable[[], datetime], **chosen: object) -
 def migrated_file(tmp_path_factory: pytest.TempPathFactory) -> Path:
     """An empty database at head, made once and copied for each test."""
     folder = tmp_path_factory.mktemp("migrated")
-    upkeep.migrate(services_in(folder, StandingClock()))
+    services = services_in(folder, StandingClock())
+    upkeep.migrate(services)
+    services.close()
     return folder / "rollbook.db"
 
 
 @pytest.fixture
-def make_home(tmp_path: Path, migrated_file: Path, clock: StandingClock) -> Callable[..., Services]:
+def make_home(tmp_path: Path, migrated_file: Path, clock: StandingClock) -> Iterator[Callable[..., Services]]:
     """Makes services on a fresh migrated database; settings may be chosen by name."""
+    made: list[Services] = []
 
     def make(**chosen: object) -> Services:
         folder = tmp_path / "home"
         folder.mkdir()
         shutil.copy(migrated_file, folder / "rollbook.db")
-        return services_in(folder, clock, **chosen)
+        made.append(services_in(folder, clock, **chosen))
+        return made[-1]
 
-    return make
+    yield make
+    for one in made:
+        one.close()
 
 
 @pytest.fixture
