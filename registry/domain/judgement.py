@@ -6,7 +6,7 @@ from collections.abc import Sequence
 from datetime import datetime, timedelta
 
 from registry.domain.alert import AlertContent
-from registry.domain.calibration import Calibration
+from registry.domain.calibration import Calibration, InForce
 from registry.domain.consequence import consequence
 from registry.domain.evaluation import EvaluationResult, Finding, QuantityFinding
 from registry.domain.settling import cannot_tell
@@ -126,14 +126,16 @@ def no_evidence(vehicle_name: str, last_at: datetime | None, as_of: datetime, si
     )
 
 
-def not_loaded(vehicle_name: str, drives_on: int | None, in_force: Calibration) -> AlertContent:
+def not_loaded(vehicle_name: str, drives_on: int | None, in_force: InForce) -> AlertContent:
     """The alert for a vehicle that still drives on an earlier set days after an adoption."""
-    adopted = "" if in_force.in_force_from is None else f" since {in_force.in_force_from:%Y-%m-%d}"
     earlier = "an unknown set" if drives_on is None else f"number {drives_on}"
     return AlertContent(
         kind="not_loaded",
         quantity=None,
-        message=f"{vehicle_name}: still drives on {earlier}; number {in_force.number} is in force{adopted}",
+        message=(
+            f"{vehicle_name}: still drives on {earlier}; "
+            f"number {in_force.number} is in force since {in_force.in_force_from:%Y-%m-%d}"
+        ),
         consequence="What was put into force has no effect until the vehicle loads it.",
         advice="Start the vehicle again where it has network, or carry the parameters to it.",
         priority="medium",
