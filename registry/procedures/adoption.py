@@ -77,7 +77,7 @@ def adopt(
         }
         journal.write(c, now, str(actor), "adopted", calibration.vehicle_id, what)
         # What was said against the calibration before no longer speaks of what the vehicle is to load.
-        alerting.clear_deviations(c, services, calibration.vehicle_id, now, "another calibration came into force")
+        alerting.clear_for_another(c, services, calibration.vehicle_id, now, "another calibration came into force")
         refresh_sheet(c, calibration.vehicle_id, now)
         return calibrations.by_id(c, calibration_id)
 
@@ -133,7 +133,7 @@ def withdraw(
         }
         journal.write(c, now, str(actor), "withdrawn", calibration.vehicle_id, what)
         if was_in_force:
-            alerting.clear_deviations(c, services, calibration.vehicle_id, now, "the calibration was withdrawn")
+            alerting.clear_for_another(c, services, calibration.vehicle_id, now, "the calibration was withdrawn")
         refresh_sheet(c, calibration.vehicle_id, now)
         return Withdrawal(calibrations.by_id(c, calibration_id), holds, loaded_by)
 

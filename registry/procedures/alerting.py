@@ -1,8 +1,7 @@
 """Alerts follow the evidence: one open alert a cause, updated while it holds, closed when it no longer does.
 
 The times of an alert are the pass's (``at``); when it was written is kept apart. A late look at the past never
-overrides
-what a later look has already said about the same cause.
+overrides what a later look has already said about the same cause, whatever people have done with the alert since.
 """
 
 from __future__ import annotations
@@ -10,7 +9,7 @@ from __future__ import annotations
 from dataclasses import replace
 from datetime import datetime
 
-from registry.domain.alert import Alert, AlertContent
+from registry.domain.alert import Alert, AlertContent, AlertStanding
 from registry.domain.person import Actor
 from registry.errors import Conflict
 from registry.procedures import authority
@@ -20,17 +19,25 @@ from registry.storage import journal
 from registry.storage.engine import Connection
 
 
-def raise_or_update(c: Connection, services: Services, vehicle_id: str, content: AlertContent, at: datetime) -> Alert:
-    """Open an alert for a cause, or let the open one say what holds now; one that had returned is raised again."""
-    recorded_at = services.now()
+def raise_or_update(
+    c: Connection, services: Services, vehicle_id: str, content: AlertContent, at: datetime
+) -> Alert | None:
+    """Open an alert for a cause, or let the open one say what holds now; one that had returned is raised again.
+
+    Returns
+    -------
+    Alert or None
+        The open alert of the cause; None when a later look has found that it does not hold.
+    """
     known = _open_with_cause(c, vehicle_id, content.cause())
+    if _is_late(c, vehicle_id, content.cause(), at):
+        return known
+    recorded_at = services.now()
     if known is None:
         raised = alert_store.raise_alert(c, services.new_id(), vehicle_id, content, at, recorded_at)
         what = {"alert_id": raised.alert_id, "cause": content.cause(), "message": content.message}
         journal.write(c, recorded_at, "schedule", "alert raised", vehicle_id, what)
         return raised
-    if at < known.updated_at:
-        return known
     if known.standing == "returned":
         alert_store.update(c, known.alert_id, content, at, recorded_at)
         alert_store.set_standing(
@@ -48,24 +55,22 @@ def raise_or_update(c: Connection, services: Services, vehicle_id: str, content:
 def clear(c: Connection, services: Services, vehicle_id: str, cause: str, at: datetime, note: str) -> Alert | None:
     """The cause no longer holds: an acknowledged alert is closed, one nobody has seen stays as returned until seen."""
     known = _open_with_cause(c, vehicle_id, cause)
-    if known is None or known.standing == "returned" or at < known.updated_at:
+    if known is None or known.standing == "returned" or _is_late(c, vehicle_id, cause, at):
         return known
     recorded_at = services.now()
     seen = known.standing in ("acknowledged", "shelved")
-    standing, what = ("closed", "closed by evidence") if seen else ("returned", "no longer holds")
-    alert_store.set_standing(
-        c, known.alert_id, "closed" if seen else "returned", at, recorded_at, alert_store.PROGRAM, what, note
-    )
-    journal.write(
-        c, recorded_at, "schedule", f"alert {standing}", vehicle_id, {"alert_id": known.alert_id, "note": note}
-    )
-    return replace(known, standing="closed" if seen else "returned", updated_at=at)
+    standing: AlertStanding = "closed" if seen else "returned"
+    said = "closed by evidence" if seen else "no longer holds"
+    alert_store.set_standing(c, known.alert_id, standing, at, recorded_at, alert_store.PROGRAM, said, note)
+    what = {"alert_id": known.alert_id, "note": note}
+    journal.write(c, recorded_at, "schedule", f"alert {standing}", vehicle_id, what)
+    return replace(known, standing=standing, updated_at=at)
 
 
-def clear_deviations(c: Connection, services: Services, vehicle_id: str, at: datetime, note: str) -> None:
-    """Alerts on deviations from a calibration do not outlive it: what drives now is judged afresh."""
+def clear_for_another(c: Connection, services: Services, vehicle_id: str, at: datetime, note: str) -> None:
+    """Another calibration, or none, is in force: deviations from the one before, and its loading, no longer matter."""
     for one in alert_store.open_for(c, vehicle_id):
-        if one.content.kind == "beyond_tolerance":
+        if one.content.kind in ("beyond_tolerance", "not_loaded"):
             clear(c, services, vehicle_id, one.content.cause(), at, note)
 
 
@@ -83,17 +88,9 @@ def acknowledge(services: Services, actor: Actor, alert_id: str, note: str | Non
         known = alert_store.by_id(c, alert_id)
         if known.standing in ("acknowledged", "closed"):
             raise Conflict(f"the alert is already {known.standing}")
-        standing = "closed" if known.standing == "returned" else "acknowledged"
-        alert_store.set_standing(
-            c,
-            alert_id,
-            "closed" if standing == "closed" else "acknowledged",
-            max(now, known.updated_at),
-            now,
-            str(actor),
-            "acknowledged",
-            note,
-        )
+        standing: AlertStanding = "closed" if known.standing == "returned" else "acknowledged"
+        at = max(now, known.updated_at)
+        alert_store.set_standing(c, alert_id, standing, at, now, str(actor), "acknowledged", note)
         what = {"alert_id": alert_id, "note": note, "standing": standing}
         journal.write(c, now, str(actor), "alert acknowledged", known.vehicle_id, what)
         return alert_store.by_id(c, alert_id)
@@ -101,3 +98,9 @@ def acknowledge(services: Services, actor: Actor, alert_id: str, note: str | Non
 
 def _open_with_cause(c: Connection, vehicle_id: str, cause: str) -> Alert | None:
     return next((one for one in alert_store.open_for(c, vehicle_id) if one.content.cause() == cause), None)
+
+
+def _is_late(c: Connection, vehicle_id: str, cause: str, at: datetime) -> bool:
+    """Whether evidence of a later time has spoken on the cause already."""
+    last = alert_store.last_evidence_at(c, vehicle_id, cause)
+    return last is not None and at < last

@@ -8,20 +8,29 @@ from datetime import datetime
 
 import numpy as np
 
-from registry.domain.calibration import Calibration, CalibrationResult, CalibrationRun, Kind, Matrix3, Observed
+from registry.domain.calibration import Calibration, CalibrationResult, Kind, Observed
 from registry.domain.person import Actor
 from registry.domain.run import Run
 from registry.domain.settling import SETTLING_RUN
 from registry.domain.tolerance import QUANTITIES, QUANTITY_WORDS
 from registry.domain.vehicle import Parameters, VehicleVersion
 from registry.errors import Conflict, FieldError, Invalid, NotObserved
-from registry.numerics.arrays import Bool, Float
+from registry.numerics.arrays import Bool
 from registry.numerics.closure_map import CountsStack, MapStack
-from registry.numerics.fit import METHOD_VERSION, Fit, Hold, fit, misclosures
-from registry.numerics.observability import observed, quantity_covariance, to_quantities
+from registry.numerics.fit import METHOD_VERSION, Fit, fit, misclosures
+from registry.numerics.observability import observed
 from registry.numerics.start_values import find_start
 from registry.procedures import authority
-from registry.procedures.evidence import Evidence, misclosure_of, parameter_array, parameters_of
+from registry.procedures.calibration_results import (
+    calibration_result,
+    contributions,
+    current_calibration,
+    held_fit,
+    hold_from,
+    matrix,
+    supplier_of,
+)
+from registry.procedures.evidence import Evidence, parameter_array, parameters_of
 from registry.services import Services
 from registry.storage import calibrations as calibration_store
 from registry.storage import in_force as in_force_store
@@ -37,6 +46,8 @@ _SEARCH_RUNS = 40
 _GOOD_START_SCORE = 2.0
 #: The fit's covariance needs at least this much more evidence than quantities.
 _LEAST_DEGREES = 1.0
+#: Bounds of what may be entered: lengths in metres, and the least relative uncertainty.
+_LARGEST_M, _SMALLEST_U = 1e3, 1e-9
 
 
 @dataclass(frozen=True)
@@ -47,7 +58,6 @@ class _Question:
     runs: tuple[Run, ...]
     in_force: Calibration | None
     supplier: Calibration | None
-    window_end: datetime | None
 
 
 def propose_baseline(
@@ -65,14 +75,13 @@ def propose_baseline(
     NotObserved
         The runs leave a quantity open that the calibration in force does not supply; one error a quantity.
     Conflict
-        Another calibration came into force while this one was fitted.
+        While this one was fitted another calibration came into force, or a run that it rests on fell out of use.
     """
     authority.require(actor, "technician")
-    now = services.now()
     with services.read() as c:
-        question = _ask(c, vehicle_id, run_ids, now)
+        question = _ask(c, vehicle_id, run_ids, services.now())
         result = _answer(c, question, note)
-    return propose(services, actor, vehicle_id, result, question.in_force)
+    return _propose(services, actor, vehicle_id, result, question.in_force)
 
 
 def propose_entered(
@@ -95,19 +104,12 @@ def propose_entered(
     Raises
     ------
     Invalid
-        A value or uncertainty is not above zero.
+        The kind is none to enter, a value or uncertainty is not above zero, or the uncertainty is absurd.
     """
     authority.require(actor, "technician")
-    names = ("left_mm_per_tick", "right_mm_per_tick", "width_mm")
-    errors = [
-        FieldError(f"/{name}", "must be above 0")
-        for name, v in zip(names, parameters.as_tuple(), strict=True)
-        if not v > 0
-    ]
-    errors += [FieldError(f"/u/{name}", "must be above 0") for name, u in zip(names, u_m, strict=True) if not u > 0]
-    if errors:
-        raise Invalid("the values cannot be taken as they are", tuple(errors))
-    relative = np.array(u_m) / parameter_array(parameters)
+    _refuse_entry(kind, parameters, u_m)
+    parameters = parameters_of(parameter_array(parameters))
+    relative = np.array(u_m, dtype=np.float64) / parameter_array(parameters)
     with services.read() as c:
         vehicle_store.current(c, vehicle_id)
         in_force = current_calibration(c, vehicle_id, services.now())
@@ -119,98 +121,52 @@ def propose_entered(
         method_version=METHOD_VERSION,
         note=note,
     )
-    return propose(services, actor, vehicle_id, result, in_force)
+    return _propose(services, actor, vehicle_id, result, in_force)
 
 
-def propose(
+def _refuse_entry(kind: Kind, parameters: Parameters, u_m: tuple[float, float, float]) -> None:
+    errors: list[FieldError] = []
+    if kind not in ("entered", "provisional"):
+        errors.append(FieldError("/kind", "must be entered or provisional: the other kinds come from runs"))
+    for name, value, u in zip(
+        ("left_mm_per_tick", "right_mm_per_tick", "width_mm"), parameters.as_tuple(), u_m, strict=True
+    ):
+        if not 0.0 < value <= _LARGEST_M:
+            errors.append(FieldError(f"/{name}", "must be above 0, and of a size that a vehicle can have"))
+        if not 0.0 < u <= _LARGEST_M:
+            errors.append(FieldError(f"/u/{name}", "must be above 0: no value is known exactly"))
+        elif value > 0.0 and not _SMALLEST_U <= u / value <= 1.0:
+            detail = "must be between a billionth of the value and the value itself: check the unit"
+            errors.append(FieldError(f"/u/{name}", detail))
+    if errors:
+        raise Invalid("the values cannot be taken as they are", tuple(errors))
+
+
+def _propose(
     services: Services, actor: Actor, vehicle_id: str, result: CalibrationResult, in_force: Calibration | None
 ) -> Calibration:
-    """Record a result as a proposal, if what it started from is still in force.
-
-    Raises
-    ------
-    Conflict
-        Another calibration came into force meanwhile.
-    """
+    """Record a result as a proposal, if what it started from still holds: a fit takes seconds and the world moves."""
     now = services.now()
     with services.write() as c:
         held = in_force_store.in_force(c, vehicle_id, now)
         based_on = None if in_force is None else in_force.calibration_id
         if (None if held is None else held.calibration_id) != based_on:
             raise Conflict("another calibration came into force meanwhile: propose again from it")
+        _refuse_outdated(c, vehicle_id, result, now)
         made = calibration_store.add(c, services.new_id(), vehicle_id, result, based_on, now, str(actor))
         what = {"calibration_id": made.calibration_id, "number": made.number, "kind": result.kind, "note": result.note}
         journal.write(c, now, str(actor), "calibration proposed", vehicle_id, what)
     return made
 
 
-def current_calibration(c: Connection, vehicle_id: str, at: datetime) -> Calibration | None:
-    """The calibration in force at a time, if any."""
-    held = in_force_store.in_force(c, vehicle_id, at)
-    if held is None or held.calibration_id is None:
-        return None
-    return calibration_store.by_id(c, held.calibration_id)
-
-
-def supplied_by(calibration: Calibration | None, window_end: datetime | None) -> Calibration | None:
-    """The calibration that may lend a quantity its runs leave open: not a provisional one, nor one from before the
-    work.
-    """
-    if calibration is None or calibration.result.kind == "provisional" or calibration.in_force_from is None:
-        return None
-    if window_end is not None and calibration.in_force_from < window_end:
-        return None
-    return calibration
-
-
-def hold_from(calibration: Calibration, which: Bool) -> Hold:
-    """Quantities of a calibration as supplied values for a fit."""
-    array = parameter_array(calibration.result.parameters)
-    covariance = quantity_covariance(np.array(calibration.result.covariance_relative), array)
-    return Hold(which, to_quantities(array), covariance)
-
-
-def calibration_result(
-    kind: Kind, answer: Fit, seen: Bool, runs: tuple[CalibrationRun, ...], note: str | None
-) -> CalibrationResult:
-    """A fit as the content of a calibration."""
-    tick_factor, side_ratio, width = (bool(value) for value in seen)
-    return CalibrationResult(
-        kind=kind,
-        parameters=parameters_of(answer.parameters),
-        covariance_relative=matrix(answer.covariance_relative),
-        observed=Observed(tick_factor=tick_factor, side_ratio=side_ratio, width=width),
-        runs=runs,
-        birge_ratio=answer.birge_ratio,
-        coverage_factor=answer.coverage_factor,
-        random_error_m_per_sqrt_m=float(np.sqrt(answer.rolling_noise_m)),
-        method_version=METHOD_VERSION,
-        note=note,
-    )
-
-
-def contributions(runs: Sequence[Run], answer: Fit, before: Float) -> tuple[CalibrationRun, ...]:
-    """What each run contributed to a fit; ``before`` (n, 4) are the misclosures by the parameters before it."""
-    return tuple(
-        CalibrationRun(
-            run_id=run.run_id,
-            weight=float(answer.weight[index]),
-            before=misclosure_of(before[index], run.closure),
-            after=misclosure_of(answer.residual[index], run.closure),
-            influence=(
-                float(answer.influence[index, 0]),
-                float(answer.influence[index, 1]),
-                float(answer.influence[index, 2]),
-            ),
-        )
-        for index, run in enumerate(runs)
-    )
-
-
-def matrix(array: Float) -> Matrix3:
-    """A (3, 3) array as nested tuples."""
-    first, second, third = ((float(row[0]), float(row[1]), float(row[2])) for row in array)
-    return (first, second, third)
+def _refuse_outdated(c: Connection, vehicle_id: str, result: CalibrationResult, now: datetime) -> None:
+    """The runs behind a result must still be usable, and no work may have come between them and now."""
+    work = maintenance_store.latest_window_end(c, vehicle_id, now)
+    for run in run_store.by_ids(c, [one.run_id for one in result.runs]):
+        if run.use != "usable":
+            raise Conflict(f"run {run.run_key} was set aside meanwhile: propose again without it")
+        if work is not None and run.started_at < work.done_at:
+            raise Conflict("work that ends the window was recorded meanwhile: propose again from the runs after it")
 
 
 def _ask(c: Connection, vehicle_id: str, run_ids: tuple[str, ...] | None, now: datetime) -> _Question:
@@ -218,12 +174,12 @@ def _ask(c: Connection, vehicle_id: str, run_ids: tuple[str, ...] | None, now: d
     work = maintenance_store.latest_window_end(c, vehicle_id, now)
     window_end = None if work is None else work.done_at
     if run_ids is None:
-        runs = run_store.usable(c, vehicle_id, started_from=window_end, ended_until=now)
+        runs = run_store.usable(c, vehicle_id, started_from=window_end)
     else:
         runs = run_store.by_ids(c, run_ids)
         _refuse_unfit(runs, vehicle_id, window_end)
     in_force = current_calibration(c, vehicle_id, now)
-    return _Question(version, tuple(runs), in_force, supplied_by(in_force, window_end), window_end)
+    return _Question(version, tuple(runs), in_force, supplier_of(c, in_force, now))
 
 
 def _refuse_unfit(runs: Sequence[Run], vehicle_id: str, window_end: datetime | None) -> None:
@@ -251,16 +207,19 @@ def _answer(c: Connection, question: _Question, note: str | None) -> Calibration
     evidence = Evidence(c, question.runs)
     tolerance = np.array(question.version.statement.tolerance.as_tuple())
     stack, answer = _free_fit(c, evidence, question)
-    if answer.status != "converged":
-        raise _not_observed(np.zeros(3, dtype=np.bool_), "the runs contradict one another and the fit does not settle")
     seen = observed(answer.u_quantities, tolerance) & (answer.degrees_of_freedom >= _LEAST_DEGREES)
-    if not seen.all():
+    if answer.status == "converged" and not seen.all():
         if question.supplier is None:
             raise _not_observed(seen, "the runs leave it open and no calibration in force supplies it")
-        answer = fit(stack, evidence.closures, answer.parameters, hold_from(question.supplier, ~seen))
+        stack, answer = held_fit(c, evidence, stack, answer, hold_from(question.supplier, ~seen))
+    if answer.status != "converged":
+        raise _not_observed(np.zeros(3, dtype=np.bool_), "the runs contradict one another and the fit does not settle")
     before_by = question.version.statement.nominal if question.in_force is None else question.in_force.result.parameters
-    before = misclosures(evidence.counts_stack(c), evidence.closures, parameter_array(before_by))
-    return calibration_result("baseline", answer, seen, contributions(question.runs, answer, before), note)
+    if not stack.inside(parameter_array(before_by)).all():
+        stack = evidence.counts_stack(c)
+    before = misclosures(stack, evidence.closures, parameter_array(before_by))
+    made = contributions(question.runs, answer, before)
+    return calibration_result("baseline", answer, seen, question.supplier, made, note)
 
 
 def _free_fit(c: Connection, evidence: Evidence, question: _Question) -> tuple[MapStack | CountsStack, Fit]:

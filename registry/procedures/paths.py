@@ -14,7 +14,7 @@ from registry.numerics.closure import component_jacobian, misclosure, misclosure
 from registry.numerics.closure_map import CountsStack
 from registry.numerics.fit import DEFAULT_ROLLING_NOISE_M
 from registry.numerics.kinematics import at_reference_point, path
-from registry.procedures.baseline import current_calibration
+from registry.procedures.calibration_results import current_calibration
 from registry.procedures.evidence import Evidence, misclosure_of, parameter_array
 from registry.services import Services
 from registry.storage import calibrations as calibration_store

@@ -7,7 +7,7 @@ from dataclasses import asdict, fields, replace
 from datetime import datetime
 from typing import Any, Literal
 
-from sqlalchemy import Row, Select, insert, select
+from sqlalchemy import Row, Select, func, insert, select
 
 from registry.domain.alert import Alert, AlertContent, AlertEvent, AlertKind, AlertStanding
 from registry.errors import NotFound
@@ -98,6 +98,16 @@ def all_open(c: Connection) -> list[Alert]:
     """All open alerts, newest first, without their history."""
     statement = _ALERTS.where(_OPEN).order_by(alerts.c.raised_at.desc(), alerts.c.sequence.desc())
     return [_alert(row) for row in c.execute(statement)]
+
+
+def last_evidence_at(c: Connection, vehicle_id: str, cause: str) -> datetime | None:
+    """When evidence last spoke on a cause, on any alert of it, closed ones too. What people did does not count."""
+    latest = select(func.max(alert_events.c.at, type_=alert_events.c.at.type)).join(
+        alerts, alerts.c.alert_id == alert_events.c.alert_id
+    )
+    of_cause = (alerts.c.vehicle_id == vehicle_id, alerts.c.cause == cause, alert_events.c.by == PROGRAM)
+    at: datetime | None = c.scalar(latest.where(*of_cause))
+    return at
 
 
 def page(
