@@ -17,7 +17,7 @@ from registry.domain import judgement
 from registry.domain.calibration import Calibration, CalibrationResult, InForce
 from registry.domain.evaluation import Evaluation
 from registry.domain.maintenance import Maintenance
-from registry.domain.tolerance import QUANTITIES
+from registry.domain.tolerance import QUANTITIES, Quantity
 from registry.domain.vehicle import VehicleVersion
 from registry.numerics import closure_map
 from registry.procedures import alerting, standing_questions
@@ -54,13 +54,18 @@ class LeaseLost(Exception):  # noqa: N818 - says what happened
 
 @dataclass(frozen=True)
 class _Question:
-    """What a pass looks at for one vehicle; ``inputs`` tells whether anything is new since the last evaluation."""
+    """What a pass looks at for one vehicle; ``inputs`` tells whether anything is new since the last evaluation.
+
+    ``late`` is whether a later time was judged before: then this look is history. It is recorded, but alerts and
+    proposals are about the present and stay as the later look left them.
+    """
 
     version: VehicleVersion
     in_force: InForce | None
     work: Maintenance | None
     inputs: str
     last: Evaluation | None
+    late: bool
 
     @property
     def held(self) -> str | None:
@@ -107,17 +112,20 @@ def evaluate_vehicle(
         question = _ask(c, vehicle_id, as_of)
         answer = _answer(c, services, question, as_of) if question.new or force else None
         wishes = standing_questions.wishes(c, services, question.version, question.in_force, as_of)
-    if answer is None and not wishes and not question.moved:
+    if answer is None and (question.late or not (wishes or question.moved)):
         return None
     with services.write() as c:
         _still_ours(c, services, holder)
-        if question.moved:
-            alerting.clear_for_another(c, services, vehicle_id, as_of, "another calibration is in force")
+        if question.moved and not question.late:
+            _leave_old_ground(c, services, question, as_of)
         evaluation = None
         if answer is not None and _same_ground(c, question, vehicle_id, as_of):
             evaluation = _record(c, services, question, answer, as_of)
-        for wish in wishes:
-            standing_questions.grant(c, services, vehicle_id, wish, as_of)
+        if wishes and not question.late:
+            # Asked again: another calibration may have come into force, or a boot in, while the runs were fitted.
+            in_force = in_force_store.in_force(c, vehicle_id, as_of)
+            for wish in standing_questions.wishes(c, services, question.version, in_force, as_of):
+                standing_questions.grant(c, services, vehicle_id, wish, as_of)
         refresh_sheet(c, vehicle_id, services.now())
     return evaluation
 
@@ -133,7 +141,11 @@ def _ask(c: Connection, vehicle_id: str, as_of: datetime) -> _Question:
         run_store.changes_mark(c, vehicle_id, as_of),
     )
     inputs = hashlib.sha256("|".join(parts).encode()).hexdigest()[:32]
-    return _Question(version, in_force, work, inputs, evaluation_store.latest(c, vehicle_id, as_of))
+    last = evaluation_store.latest(c, vehicle_id)
+    late = last is not None and last.as_of > as_of
+    if late:
+        last = evaluation_store.latest(c, vehicle_id, as_of)
+    return _Question(version, in_force, work, inputs, last, late)
 
 
 def _answer(c: Connection, services: Services, question: _Question, as_of: datetime) -> _Answer | None:
@@ -154,7 +166,7 @@ def _answer(c: Connection, services: Services, question: _Question, as_of: datet
         c, calibration.vehicle_id, started_from=begin, ended_until=as_of, limit=services.settings.window_runs
     )
     runs = tuple(run for run in reversed(recent) if run.run_id not in made)
-    return _Answer(judge(c, runs, calibration, question.version), calibration) if runs else None
+    return _Answer(judge(c, runs, calibration, question.version, as_of), calibration) if runs else None
 
 
 def _evidence_end(c: Connection, calibration: Calibration) -> datetime:
@@ -164,9 +176,20 @@ def _evidence_end(c: Connection, calibration: Calibration) -> datetime:
 
 
 def _same_ground(c: Connection, question: _Question, vehicle_id: str, as_of: datetime) -> bool:
-    """Whether the calibration that the fit started from is still the one in force at that time."""
+    """Whether what the fit started from is still so: what is in force at that time, and the evaluation before."""
     held = in_force_store.in_force(c, vehicle_id, as_of)
-    return held is not None and held.calibration_id == question.held
+    last = evaluation_store.latest(c, vehicle_id, as_of)
+    overtaken = last is not None and (question.last is None or last.evaluation_id != question.last.evaluation_id)
+    return held is not None and held.calibration_id == question.held and not overtaken
+
+
+def _leave_old_ground(c: Connection, services: Services, question: _Question, as_of: datetime) -> None:
+    """What was said, and proposed, against another calibration than the one in force no longer holds."""
+    alerting.clear_for_another(c, services, question.version.vehicle_id, as_of, "another calibration is in force")
+    for old in calibration_store.open_proposals(c, question.version.vehicle_id, "evaluation"):
+        if old.based_on != question.held:
+            reason = "another calibration came into force"
+            calibration_store.add_standing(c, old.calibration_id, "superseded", services.now(), "schedule", reason)
 
 
 def _record(c: Connection, services: Services, question: _Question, answer: _Answer, as_of: datetime) -> Evaluation:
@@ -174,14 +197,17 @@ def _record(c: Connection, services: Services, question: _Question, answer: _Ans
     verdict = answer.verdict
     for run_id, item in verdict.new_maps.items():
         run_store.put_map(c, run_id, closure_map.encode(item))
-    proposal = _keep_one_proposal(c, services, question, verdict.proposal)
+    standing = [] if question.late else _holding(c, question, verdict)
+    proposal = _proposed(c, services, question, verdict, keep=bool(standing))
     evaluation = Evaluation(
         evaluation_id=services.new_id(),
         vehicle_id=vehicle_id,
         as_of=as_of,
         recorded_at=now,
         result=verdict.result,
-        proposed_calibration_id=None if proposal is None else proposal.calibration_id,
+        proposed_calibration_id=None
+        if proposal is None or verdict.result.finding != "beyond"
+        else proposal.calibration_id,
         inputs=question.inputs,
     )
     evaluation_store.add(c, evaluation)
@@ -191,25 +217,33 @@ def _record(c: Connection, services: Services, question: _Question, answer: _Ans
         "message": verdict.result.message,
     }
     journal.write(c, now, "schedule", "evaluated", vehicle_id, what)
-    _follow_alerts(c, services, question, answer, proposal, as_of)
+    if not question.late:
+        _follow_alerts(c, services, question, answer, standing, proposal, as_of)
     return evaluation
 
 
-def _keep_one_proposal(
-    c: Connection, services: Services, question: _Question, wanted: CalibrationResult | None
+def _proposed(
+    c: Connection, services: Services, question: _Question, verdict: Verdict, *, keep: bool
 ) -> Calibration | None:
-    """One open proposal of an evaluation a vehicle: kept while it says the same, else superseded by the new one."""
-    vehicle_id, now = question.version.vehicle_id, services.now()
-    held = question.held
+    """One open proposal of an evaluation a vehicle: kept while it says the same, else superseded by the new one.
+
+    While an alert stands in its dead band the proposal that it speaks of is kept too (``keep``). A look at a time when
+    another calibration was in force than now proposes nothing: nobody could adopt it.
+    """
+    vehicle_id, now, wanted = question.version.vehicle_id, services.now(), verdict.proposal
+    present = in_force_store.in_force(c, vehicle_id)
+    if question.late or present is None or present.calibration_id != question.held:
+        return None
     standing = calibration_store.open_proposals(c, vehicle_id, "evaluation")
-    if wanted is not None and standing and standing[-1].based_on == held and _says_the_same(standing[-1], wanted):
-        return standing[-1]
+    current = standing[-1] if standing and standing[-1].based_on == question.held else None
+    if current is not None and (keep if wanted is None else _says_the_same(current, wanted)):
+        return current
     for old in standing:
         reason = "a later evaluation says otherwise"
         calibration_store.add_standing(c, old.calibration_id, "superseded", now, "schedule", reason)
     if wanted is None:
         return None
-    made = calibration_store.add(c, services.new_id(), vehicle_id, wanted, held, now, "schedule")
+    made = calibration_store.add(c, services.new_id(), vehicle_id, wanted, question.held, now, "schedule")
     what = {"calibration_id": made.calibration_id, "number": made.number, "kind": "evaluation"}
     journal.write(c, now, "schedule", "calibration proposed", vehicle_id, what)
     return made
@@ -223,39 +257,40 @@ def _says_the_same(old: Calibration, new: CalibrationResult) -> bool:
     return bool(np.all(moved <= u_old) and np.all(u_new > _SURER * u_old) and old.result.observed == new.observed)
 
 
+def _holding(c: Connection, question: _Question, verdict: Verdict) -> list[Quantity]:
+    """Quantities of which an alert stands after this verdict: raised by it, kept in the dead band, or not spoken of."""
+    open_alerts = alert_store.open_for(c, question.version.vehicle_id)
+    causes = {one.content.cause() for one in open_alerts if one.standing != "returned"}
+    found: list[Quantity] = []
+    for quantity, item, sure in zip(QUANTITIES, verdict.result.quantities(), verdict.confirmed, strict=True):
+        stands = f"beyond_tolerance:{quantity}" in causes
+        holds = judgement.holds_beyond(item, was_open=stands, confirmed=sure)
+        if holds or (holds is None and stands):
+            found.append(quantity)
+    return found
+
+
 def _follow_alerts(
     c: Connection,
     services: Services,
     question: _Question,
     answer: _Answer,
+    standing: Sequence[Quantity],
     proposal: Calibration | None,
     as_of: datetime,
 ) -> None:
-    vehicle_id, stated, verdict = question.version.vehicle_id, question.version.statement, answer.verdict
-    open_causes = {one.content.cause() for one in alert_store.open_for(c, vehicle_id) if one.standing != "returned"}
-    for index, quantity in enumerate(QUANTITIES):
-        item = verdict.result.quantities()[index]
-        cause = f"beyond_tolerance:{quantity}"
-        holds = judgement.holds_beyond(item, was_open=cause in open_causes, confirmed=verdict.confirmed[index])
-        if holds is True:
+    """Let the alerts on deviations say what holds; one on a quantity that these runs do not tell stays as it is."""
+    vehicle_id, stated, result = question.version.vehicle_id, question.version.statement, answer.verdict.result
+    for quantity, item in zip(QUANTITIES, result.quantities(), strict=True):
+        if quantity not in standing and item.observed:
+            alerting.clear(c, services, vehicle_id, f"beyond_tolerance:{quantity}", as_of, result.message)
+        elif item.observed:
             content = judgement.beyond_tolerance(
-                stated.name, quantity, verdict.result, stated.tolerance, answer.against, proposal
+                stated.name, quantity, result, stated.tolerance, answer.against, proposal
             )
             alerting.raise_or_update(c, services, vehicle_id, content, as_of)
-        elif holds is False:
-            alerting.clear(c, services, vehicle_id, cause, as_of, verdict.result.message)
 
 
 def _still_ours(c: Connection, services: Services, holder: Holder | None) -> None:
     if holder is not None and not leases.holds(c, holder.name, holder.holder, holder.fence, services.now()):
         raise LeaseLost("another process took the pass over")
-
-
-def vehicles_to_look_at(c: Connection, vehicle_ids: Sequence[str] | None) -> list[str]:
-    """The vehicles of a pass: those named, or all."""
-    known = [version.vehicle_id for version in vehicle_store.all_current(c)]
-    if vehicle_ids is None:
-        return known
-    for vehicle_id in vehicle_ids:
-        vehicle_store.current(c, vehicle_id)
-    return list(vehicle_ids)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from datetime import datetime
 
 import numpy as np
 
@@ -25,7 +26,13 @@ from registry.numerics.observability import (
 )
 from registry.numerics.recent import last_break
 from registry.numerics.start_values import find_start
-from registry.procedures.calibration_results import calibration_result, contributions, held_fit, hold_from
+from registry.procedures.calibration_results import (
+    calibration_result,
+    contributions,
+    held_fit,
+    hold_from,
+    supplier_of,
+)
 from registry.procedures.evidence import Evidence, parameter_array, parameters_of, refold
 from registry.storage.engine import Connection
 
@@ -55,7 +62,7 @@ class Verdict:
     confirmed : (bool, bool, bool)
         Whether each quantity would stay likely beyond its tolerance without any single run.
     proposal : CalibrationResult or None
-        The fit as a calibration, when it is beyond tolerance.
+        The fit as a calibration, when it is beyond tolerance and nothing must be made up for it.
     new_maps : dict of str to ClosureMap
         By run, where the stored maps do not reach.
     """
@@ -66,14 +73,22 @@ class Verdict:
     new_maps: dict[str, ClosureMap]
 
 
-def judge(c: Connection, runs: tuple[Run, ...], calibration: Calibration, version: VehicleVersion) -> Verdict:
-    """Fit runs (in the order driven, at least one) and hold the outcome against a calibration and the tolerances."""
+def judge(
+    c: Connection, runs: tuple[Run, ...], calibration: Calibration, version: VehicleVersion, at: datetime
+) -> Verdict:
+    """Fit runs (in the order driven, at least one) and hold the outcome against a calibration and the tolerances.
+
+    Parameters
+    ----------
+    at
+        When the calibration is in force: what it may lend to a proposal depends on the work done until then.
+    """
     fitted = _fit(c, runs, calibration)
     quantities, confirmed = _judge(fitted.answer, calibration, version)
     result = _result(fitted, calibration, quantities, confirmed)
     proposal = None
     if result.finding == "beyond":
-        proposal = _proposal(c, fitted, np.array([item.observed for item in quantities]), calibration)
+        proposal = _proposal(c, fitted, np.array([item.observed for item in quantities]), calibration, at)
     return Verdict(result, confirmed, proposal, fitted.new_maps)
 
 
@@ -189,14 +204,23 @@ def _result(
     )
 
 
-def _proposal(c: Connection, fitted: _Fitted, seen: Bool, calibration: Calibration) -> CalibrationResult:
-    """The fit as a calibration; what the runs do not tell is copied from the one in force."""
+def _proposal(
+    c: Connection, fitted: _Fitted, seen: Bool, calibration: Calibration, at: datetime
+) -> CalibrationResult | None:
+    """The fit as a calibration; what the runs do not tell is copied from the one in force, where that may lend it."""
     evidence, stack, answer = fitted.evidence, fitted.stack, fitted.answer
     supplier = None
     if not seen.all():
-        supplier = calibration
-        stack, answer = held_fit(c, evidence, stack, answer, hold_from(calibration, ~seen))
-    before = misclosures(evidence.counts_stack(c), evidence.closures, parameter_array(calibration.result.parameters))
+        supplier = supplier_of(c, calibration, at)
+        if supplier is None:
+            return None
+        stack, answer = held_fit(c, evidence, stack, answer, hold_from(supplier, ~seen))
+        if answer.status != "converged":
+            return None
+    reference = parameter_array(calibration.result.parameters)
+    if not bool(stack.inside(reference).all()):
+        stack = evidence.counts_stack(c)
+    before = misclosures(stack, evidence.closures, reference)
     note = f"proposed by the evaluation of {len(evidence.runs)} runs"
     given = contributions(evidence.runs, answer, before)
     return calibration_result("evaluation", answer, seen, supplier, given, note)
