@@ -53,6 +53,15 @@ class KeyRecord:
 
 
 @dataclass(frozen=True)
+class KeyOwner:
+    """Whose a valid key is: a person's with a role, or a vehicle's."""
+
+    person: str | None
+    vehicle_id: str | None
+    role: Role | None
+
+
+@dataclass(frozen=True)
 class JournalEntry:
     """Who did what, when, why. ``what`` is JSON text; each entry's hash covers the one before."""
 

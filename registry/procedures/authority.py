@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from registry.domain.person import ROLES, Actor, KeyRecord, Role
+from registry.domain.person import ROLES, Actor, KeyOwner, Role
 from registry.errors import NotAllowed
 from registry.storage import people
 from registry.storage.engine import Connection
@@ -53,10 +53,10 @@ def require_adopter(c: Connection, actor: Actor) -> None:
         )
 
 
-def actor_of(record: KeyRecord | None) -> Actor | None:
-    """Who acts under a key; None when it is unknown or revoked."""
-    if record is None or record.revoked_at is not None:
+def actor_of(owner: KeyOwner | None) -> Actor | None:
+    """Who acts under a valid key; None when it has no owner."""
+    if owner is None:
         return None
-    if record.vehicle_id is not None:
-        return Actor("vehicle", record.vehicle_id)
-    return None if record.person is None else Actor("person", record.person, record.role)
+    if owner.vehicle_id is not None:
+        return Actor("vehicle", owner.vehicle_id)
+    return None if owner.person is None else Actor("person", owner.person, owner.role)

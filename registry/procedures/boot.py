@@ -66,8 +66,8 @@ def fetch(services: Services, key: str, vehicle_id: str) -> tuple[BootSheet, byt
     """
     key32 = hashlib.sha256(key.encode()).digest()
     with services.read() as c:
-        record, sheet = boots.sheet_with_key(c, key32.hex(), vehicle_id)
-        actor = actor_of(record)
+        owner, sheet = boots.sheet_with_key(c, key32.hex(), vehicle_id)
+        actor = actor_of(owner)
         if actor is None:
             raise NotSignedIn("send a valid API key as 'Authorization: Bearer KEY'")
         require_vehicle(actor, vehicle_id, "reader")

@@ -10,7 +10,7 @@ from functools import cache
 from argon2 import PasswordHasher
 from argon2.exceptions import InvalidHashError, VerificationError
 
-from registry.domain.person import ROLES, Actor, KeyRecord, Person, Role
+from registry.domain.person import ROLES, Actor, KeyOwner, KeyRecord, Person, Role
 from registry.errors import Conflict, FieldError, Invalid, NotFound
 from registry.procedures.authority import actor_of, require
 from registry.services import Services
@@ -93,7 +93,10 @@ def issue_key(services: Services, actor: Actor, *, person: str | None = None, ve
 def actor_for_key(services: Services, key: str) -> Actor | None:
     """Who acts under a key; None when it is unknown or revoked."""
     with services.read() as c:
-        return actor_of(people.key_by_hash(c, hashlib.sha256(key.encode()).hexdigest()))
+        record = people.key_by_hash(c, hashlib.sha256(key.encode()).hexdigest())
+    if record is None or record.revoked_at is not None:
+        return None
+    return actor_of(KeyOwner(record.person, record.vehicle_id, record.role))
 
 
 @cache

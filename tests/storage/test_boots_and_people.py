@@ -3,11 +3,10 @@ from __future__ import annotations
 from datetime import timedelta
 
 import pytest
-from sqlalchemy import event
 
 from registry.domain.boot import Boot, BootSheet, BootStatement
 from registry.domain.maintenance import Maintenance
-from registry.domain.person import KeyRecord, Person
+from registry.domain.person import KeyOwner, KeyRecord, Person
 from registry.storage import boots, maintenance, people
 from registry.storage.engine import DatabaseError
 
@@ -48,16 +47,33 @@ def test_the_key_and_the_sheet_of_a_boot_come_in_one_query(services, clock, prop
         people.add_key(c, key)
     with services.read() as c:
         sent: list[str] = []
-        event.listen(c, "before_cursor_execute", lambda _c, _cu, statement, *_rest: sent.append(statement))
-        assert boots.sheet_with_key(c, key.key_hash, "tub-7") == (key, sheet)
+        owner = KeyOwner(None, "tub-7", None)
+        c.connection.driver_connection.set_trace_callback(sent.append)
+        assert boots.sheet_with_key(c, key.key_hash, "tub-7") == (owner, sheet)
         assert len(sent) == 1
-        assert boots.sheet_with_key(c, key.key_hash, "tub-8") == (key, None)
+        c.connection.driver_connection.set_trace_callback(None)
+        assert boots.sheet_with_key(c, key.key_hash, "tub-8") == (owner, None)
         assert boots.sheet_with_key(c, "0" * 64, "tub-7") == (None, None)
         assert boots.sheet(c, "tub-7") == sheet
         assert boots.all_sheets(c) == {"tub-7": sheet}
     with services.write() as c:
         boots.put_sheet(c, "tub-7", None)
         assert boots.sheet(c, "tub-7") is None
+
+
+def test_a_revoked_key_has_no_owner_and_a_persons_key_has_a_role(services, clock, proposer):
+    proposer.adopt()
+    revoked = key_of("k1", clock, vehicle_id="tub-7", revoked_at=clock())
+    with services.write() as c:
+        people.add(c, Person("Kim", "keeper", "hash", clock()))
+        people.add_key(c, revoked)
+        people.add_key(c, key_of("k2", clock, person="Kim"))
+    with services.read() as c:
+        assert boots.sheet_with_key(c, revoked.key_hash, "tub-7") == (None, None)
+        owner, sheet = boots.sheet_with_key(c, "k2".ljust(64, "0"), "tub-7")
+    assert owner == KeyOwner("Kim", None, "keeper")
+    assert sheet is not None
+    assert sheet.calibration_number == 1
 
 
 def test_people_and_the_role_of_their_keys(services, clock, vehicle):
