@@ -67,11 +67,17 @@ def clear(c: Connection, services: Services, vehicle_id: str, cause: str, at: da
     return replace(known, standing=standing, updated_at=at)
 
 
+def clear_deviations(c: Connection, services: Services, vehicle_id: str, at: datetime, note: str) -> None:
+    """What was said of deviations from a calibration no longer holds."""
+    for one in alert_store.open_for(c, vehicle_id):
+        if one.content.kind == "beyond_tolerance":
+            clear(c, services, vehicle_id, one.content.cause(), at, note)
+
+
 def clear_for_another(c: Connection, services: Services, vehicle_id: str, at: datetime, note: str) -> None:
     """Another calibration, or none, is in force: deviations from the one before, and its loading, no longer matter."""
-    for one in alert_store.open_for(c, vehicle_id):
-        if one.content.kind in ("beyond_tolerance", "not_loaded"):
-            clear(c, services, vehicle_id, one.content.cause(), at, note)
+    clear_deviations(c, services, vehicle_id, at, note)
+    clear(c, services, vehicle_id, "not_loaded", at, note)
 
 
 def acknowledge(services: Services, actor: Actor, alert_id: str, note: str | None) -> Alert:

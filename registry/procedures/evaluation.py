@@ -11,18 +11,15 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from datetime import datetime
 
-import numpy as np
-
 from registry.domain import judgement
-from registry.domain.calibration import Calibration, CalibrationResult, InForce
+from registry.domain.calibration import Calibration, InForce
 from registry.domain.evaluation import Evaluation
 from registry.domain.maintenance import Maintenance
 from registry.domain.tolerance import QUANTITIES, Quantity
 from registry.domain.vehicle import VehicleVersion
 from registry.numerics import closure_map
-from registry.procedures import alerting, standing_questions
+from registry.procedures import alerting, proposals, standing_questions
 from registry.procedures.boot_sheets import refresh_sheet
-from registry.procedures.evidence import parameter_array
 from registry.procedures.window_fit import Verdict, judge
 from registry.services import Services
 from registry.storage import alerts as alert_store
@@ -34,9 +31,6 @@ from registry.storage import maintenance as maintenance_store
 from registry.storage import runs as run_store
 from registry.storage import vehicles as vehicle_store
 from registry.storage.engine import Connection
-
-#: A new proposal replaces an open one when it differs by more than its own standard uncertainty, or is this much surer.
-_SURER = 0.7
 
 
 @dataclass(frozen=True)
@@ -111,20 +105,20 @@ def evaluate_vehicle(
     with services.read() as c:
         question = _ask(c, vehicle_id, as_of)
         answer = _answer(c, services, question, as_of) if question.new or force else None
-        wishes = standing_questions.wishes(c, services, question.version, question.in_force, as_of)
-    if answer is None and (question.late or not (wishes or question.moved)):
+        lost = _lost_ground(c, question, answer)
+        wishes = _wishes(c, services, question, question.in_force, as_of)
+    if answer is None and not lost and not wishes:
         return None
     with services.write() as c:
         _still_ours(c, services, holder)
-        if question.moved and not question.late:
-            _leave_old_ground(c, services, question, as_of)
+        if lost:
+            _leave_ground(c, services, question, as_of, lost)
         evaluation = None
         if answer is not None and _same_ground(c, question, vehicle_id, as_of):
             evaluation = _record(c, services, question, answer, as_of)
-        if wishes and not question.late:
+        if wishes:
             # Asked again: another calibration may have come into force, or a boot in, while the runs were fitted.
-            in_force = in_force_store.in_force(c, vehicle_id, as_of)
-            for wish in standing_questions.wishes(c, services, question.version, in_force, as_of):
+            for wish in _wishes(c, services, question, in_force_store.in_force(c, vehicle_id, as_of), as_of):
                 standing_questions.grant(c, services, vehicle_id, wish, as_of)
         refresh_sheet(c, vehicle_id, services.now())
     return evaluation
@@ -183,13 +177,34 @@ def _same_ground(c: Connection, question: _Question, vehicle_id: str, as_of: dat
     return held is not None and held.calibration_id == question.held and not overtaken
 
 
-def _leave_old_ground(c: Connection, services: Services, question: _Question, as_of: datetime) -> None:
-    """What was said, and proposed, against another calibration than the one in force no longer holds."""
-    alerting.clear_for_another(c, services, question.version.vehicle_id, as_of, "another calibration is in force")
-    for old in calibration_store.open_proposals(c, question.version.vehicle_id, "evaluation"):
-        if old.based_on != question.held:
-            reason = "another calibration came into force"
-            calibration_store.add_standing(c, old.calibration_id, "superseded", services.now(), "schedule", reason)
+def _wishes(
+    c: Connection, services: Services, question: _Question, in_force: InForce | None, as_of: datetime
+) -> list[standing_questions.Wish]:
+    return [] if question.late else standing_questions.wishes(c, services, question.version, in_force, as_of)
+
+
+def _lost_ground(c: Connection, question: _Question, answer: _Answer | None) -> str:
+    """Why what the last evaluation said and proposed no longer holds, though no new one says so; empty while it does.
+
+    Either another calibration is in force than it was held against, or none of the runs behind it is left: they were
+    set aside, or work has ended their window.
+    """
+    if question.late or question.last is None:
+        return ""
+    emptied = answer is None and question.new and question.held is not None
+    if not question.moved and not emptied:
+        return ""
+    vehicle_id = question.version.vehicle_id
+    stale = any(one.content.kind == "beyond_tolerance" for one in alert_store.open_for(c, vehicle_id))
+    if not stale and not calibration_store.open_proposals(c, vehicle_id, "evaluation"):
+        return ""
+    return "another calibration is in force" if question.moved else "no run is left that says so"
+
+
+def _leave_ground(c: Connection, services: Services, question: _Question, as_of: datetime, why: str) -> None:
+    """Clear what was said against another calibration, or by runs that no longer count, and what it proposed."""
+    alerting.clear_deviations(c, services, question.version.vehicle_id, as_of, why)
+    proposals.drop(c, services, question.version.vehicle_id, why)
 
 
 def _record(c: Connection, services: Services, question: _Question, answer: _Answer, as_of: datetime) -> Evaluation:
@@ -198,7 +213,9 @@ def _record(c: Connection, services: Services, question: _Question, answer: _Ans
     for run_id, item in verdict.new_maps.items():
         run_store.put_map(c, run_id, closure_map.encode(item))
     standing = [] if question.late else _holding(c, question, verdict)
-    proposal = _proposed(c, services, question, verdict, keep=bool(standing))
+    proposal = None
+    if not question.late and question.held == _present(c, vehicle_id):
+        proposal = proposals.settle(c, services, vehicle_id, question.held, verdict.proposal, keep=bool(standing))
     evaluation = Evaluation(
         evaluation_id=services.new_id(),
         vehicle_id=vehicle_id,
@@ -222,39 +239,10 @@ def _record(c: Connection, services: Services, question: _Question, answer: _Ans
     return evaluation
 
 
-def _proposed(
-    c: Connection, services: Services, question: _Question, verdict: Verdict, *, keep: bool
-) -> Calibration | None:
-    """One open proposal of an evaluation a vehicle: kept while it says the same, else superseded by the new one.
-
-    While an alert stands in its dead band the proposal that it speaks of is kept too (``keep``). A look at a time when
-    another calibration was in force than now proposes nothing: nobody could adopt it.
-    """
-    vehicle_id, now, wanted = question.version.vehicle_id, services.now(), verdict.proposal
-    present = in_force_store.in_force(c, vehicle_id)
-    if question.late or present is None or present.calibration_id != question.held:
-        return None
-    standing = calibration_store.open_proposals(c, vehicle_id, "evaluation")
-    current = standing[-1] if standing and standing[-1].based_on == question.held else None
-    if current is not None and (keep if wanted is None else _says_the_same(current, wanted)):
-        return current
-    for old in standing:
-        reason = "a later evaluation says otherwise"
-        calibration_store.add_standing(c, old.calibration_id, "superseded", now, "schedule", reason)
-    if wanted is None:
-        return None
-    made = calibration_store.add(c, services.new_id(), vehicle_id, wanted, question.held, now, "schedule")
-    what = {"calibration_id": made.calibration_id, "number": made.number, "kind": "evaluation"}
-    journal.write(c, now, "schedule", "calibration proposed", vehicle_id, what)
-    return made
-
-
-def _says_the_same(old: Calibration, new: CalibrationResult) -> bool:
-    array = parameter_array(new.parameters)
-    moved = np.abs(array / parameter_array(old.result.parameters) - 1.0)
-    u_new = np.sqrt(np.diag(np.array(new.covariance_relative)))
-    u_old = np.sqrt(np.diag(np.array(old.result.covariance_relative)))
-    return bool(np.all(moved <= u_old) and np.all(u_new > _SURER * u_old) and old.result.observed == new.observed)
+def _present(c: Connection, vehicle_id: str) -> str | None:
+    """What is in force now. A look at a time when it was another proposes nothing: nobody could adopt it."""
+    entry = in_force_store.in_force(c, vehicle_id)
+    return None if entry is None else entry.calibration_id
 
 
 def _holding(c: Connection, question: _Question, verdict: Verdict) -> list[Quantity]:
