@@ -123,7 +123,7 @@ def decision_on(
     earlier = tuple(one for one in reversed(known) if one.standing == "superseded")
     identity = calibration.calibration_id
     taking_back = withdrawal or WithdrawalForm(key=f"withdrawal-{identity}")
-    taking_back.number.choices = [(one.number, f"no. {one.number}") for one in earlier]
+    taking_back.number.choices = {str(one.number): f"no. {one.number}" for one in earlier}
     return Decision(
         calibration=calibration,
         values=value_rows(calibration.result),

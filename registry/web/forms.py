@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable
 from datetime import UTC, datetime
-from typing import Any, TypeVar
+from typing import Any, TypeVar, cast
 
 from wtforms import (
     DateTimeLocalField,
@@ -21,7 +21,7 @@ from wtforms import (
 from wtforms.validators import InputRequired, Length, Optional, ValidationError
 from wtforms.widgets import TextInput
 
-from registry.domain.maintenance import MAINTENANCE_KINDS, MAINTENANCE_WORDS
+from registry.domain.maintenance import MAINTENANCE_WORDS, Side
 from registry.domain.vehicle import Parameters
 from registry.errors import Conflict, FieldError, Invalid, NotAllowed, NothingInForce, NotObserved, Refusal
 
@@ -175,7 +175,7 @@ class WithdrawalForm(Posted):
     reason = _reason()
     then = RadioField(
         "What holds next",
-        choices=[("nothing", "Nothing: the vehicle stands still"), ("reinstate", "An earlier calibration again")],
+        choices={"nothing": "Nothing: the vehicle stands still", "reinstate": "An earlier calibration again"},
         default="nothing",
     )
     number = SelectField("Earlier calibration", [Optional()], coerce=int, validate_choice=False)
@@ -199,10 +199,10 @@ class EnteredForm(Posted):
     key = "entered"
     kind = RadioField(
         "Origin",
-        choices=[
-            ("provisional", "Provisional: enough to drive calibration runs with"),
-            ("entered", "Measured elsewhere"),
-        ],
+        choices={
+            "provisional": "Provisional: enough to drive calibration runs with",
+            "entered": "Measured elsewhere",
+        },
         default="provisional",
     )
     left_mm_per_tick = _measure("Left, mm per tick")
@@ -234,14 +234,18 @@ class MaintenanceForm(Posted):
     """Record work done on the vehicle."""
 
     key = "maintenance"
-    kind = SelectField("What was done", choices=[(kind, MAINTENANCE_WORDS[kind]) for kind in MAINTENANCE_KINDS])
+    kind = SelectField("What was done", choices={str(kind): words for kind, words in MAINTENANCE_WORDS.items()})
     side = SelectField(
         "Side",
-        choices=[("", "not one side"), ("left", "left"), ("right", "right"), ("both", "both")],
-        filters=[_or_none],
+        choices={"": "not one side", "left": "left", "right": "right", "both": "both"},
     )
     done_at = UtcField("Done at (UTC)", [InputRequired("Write when it was done.")])
     note = _note()
+
+    @property
+    def chosen_side(self) -> Side | None:
+        """The side that was worked on, where one was chosen."""
+        return cast("Side | None", self.side.data or None)
 
     @property
     def moment(self) -> datetime:

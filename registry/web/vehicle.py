@@ -141,7 +141,7 @@ def _record_maintenance(vehicle_id: str) -> BaseResponse | tuple[str, int]:
     form = MaintenanceForm(request.form)
     made = form.attempt(
         lambda: maintenance.record_maintenance(
-            services(), actor(), vehicle_id, form.moment, form.kind.data, form.side.data, form.note.data
+            services(), actor(), vehicle_id, form.moment, form.kind.data, form.chosen_side, form.note.data
         )
     )
     if made is None:

@@ -22,7 +22,7 @@ from registry.domain.run import ClosureStatement, Conditions, Run
 from registry.domain.vehicle import Parameters, VehicleStatement
 from registry.procedures import alerting, baseline, intake, people
 from registry.procedures.adoption import adopt
-from registry.procedures.boot import report_boot
+from registry.procedures.boot import refresh_sheet, report_boot
 from registry.procedures.intake import RunStatement
 from registry.procedures.maintenance import record_maintenance
 from registry.procedures.registration import put_vehicle
@@ -147,6 +147,7 @@ def furnish(services: Services, clock: StandingClock) -> Yard:
     )
     with services.write() as c:
         alert = alerting.raise_or_update(c, services, "tub-7", content, clock())
+        refresh_sheet(c, "tub-7", clock())
         result = CalibrationResult(
             "evaluation", replace(worn, width_m=0.6212), ((4e-8, 1e-8, 0.0), (1e-8, 4e-8, 0.0), (0.0, 0.0, 2.5e-7)),
             Observed(tick_factor=True, side_ratio=True, width=False),
