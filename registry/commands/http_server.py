@@ -29,7 +29,6 @@ if TYPE_CHECKING:
 #: A request that has not ended so long after SIGTERM is cut off.
 _STOP_S = 15
 _READY_EVERY_S = 0.1
-_READY_WITHIN_S = 60.0
 
 
 @dataclass(frozen=True)
@@ -132,7 +131,8 @@ def load_app(home: Path) -> Flask:
 def _announce(address: Address, when_ready: Callable[[], None], stopped: threading.Event) -> None:
     """Ask for the program's own health until it answers: sockets listen before the application is there."""
     host = {"0.0.0.0": "127.0.0.1", "::": "::1"}.get(address.host, address.host)
-    for _ in range(int(_READY_WITHIN_S / _READY_EVERY_S)):
+    answered = False
+    while not answered and not stopped.wait(_READY_EVERY_S):
         connection = http.client.HTTPConnection(host, address.port, timeout=5.0)
         try:
             connection.request("GET", "/healthz")
@@ -141,8 +141,5 @@ def _announce(address: Address, when_ready: Callable[[], None], stopped: threadi
             answered = False
         finally:
             connection.close()
-        if answered:
-            when_ready()
-            return
-        if stopped.wait(_READY_EVERY_S):
-            return
+    if answered:
+        when_ready()

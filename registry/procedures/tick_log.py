@@ -25,6 +25,8 @@ from registry.errors import FieldError, Invalid, TooLarge
 COLUMNS = ("time_s", "left_counts", "right_counts")
 MAX_SAMPLES = 2_000_000
 MAX_UNPACKED_BYTES = 256_000_000
+#: Each is remembered, to name rows as the file has them.
+MAX_BLANK_ROWS = 10_000
 #: Errors named of one file; the rest are most often the same mistake.
 MAX_ERRORS = 10
 
@@ -204,6 +206,8 @@ def _header(line: str, name: str) -> tuple[str, ...]:
 def _take(lines: list[str], first_row: int, columns: tuple[str, ...], collected: _Collected, name: str) -> None:
     blank = [index for index, line in enumerate(lines) if not line or line.isspace()]
     if blank:
+        if len(collected.blank_rows) + len(blank) > MAX_BLANK_ROWS:
+            raise TooLarge(f"{name} has more than {MAX_BLANK_ROWS:,} rows without content: remove them")
         collected.blank_rows.extend(first_row + index for index in blank)
     if len(blank) == len(lines):
         return

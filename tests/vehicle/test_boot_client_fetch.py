@@ -13,7 +13,8 @@ import time
 from pathlib import Path
 
 import pytest
-from conftest import CLIENT, KEY, NOT_MODIFIED, Server, Vehicle, lines, problem, reply, said
+
+from tests.vehicle.conftest import CLIENT, KEY, NOT_MODIFIED, Server, Vehicle, lines, problem, reply, said
 
 
 def test_the_client_is_python_3_8_and_imports_only_the_standard_library() -> None:

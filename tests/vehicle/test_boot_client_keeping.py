@@ -12,7 +12,8 @@ import time
 from pathlib import Path
 
 import pytest
-from conftest import CLIENT, KEY, NOT_MODIFIED, Server, Vehicle, lines, problem, reply, said
+
+from tests.vehicle.conftest import CLIENT, KEY, NOT_MODIFIED, Server, Vehicle, lines, problem, reply, said
 
 
 def _nothing(*withdrawn: int) -> bytes:

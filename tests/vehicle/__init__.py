@@ -1,0 +1,1 @@
+"""The client that runs on a vehicle, against registries on real sockets: honest, dead, slow and lying ones."""
