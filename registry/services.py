@@ -30,9 +30,15 @@ class Services:
     close: Callable[[], None]
 
 
-def make_services(settings: Settings) -> Services:
-    """The real services of an installation. Opens no connection: the first transaction does."""
-    engine = make_engine(settings.database_url)
+def make_services(settings: Settings, *, durable: bool = True) -> Services:
+    """The real services of an installation. Opens no connection: the first transaction does.
+
+    Parameters
+    ----------
+    durable
+        Whether each commit waits for the disk; only a demo may do without.
+    """
+    engine = make_engine(settings.database_url, durable=durable)
     return Services(
         settings=settings,
         now=clock.now,

@@ -27,7 +27,7 @@ def demo(place: Place, days: int, port: int, build_only: bool) -> None:
     logs.configure()
     address = None if build_only else http_server.free_address("127.0.0.1", port)
     home = _empty(place.home)
-    services = make_services(Place(home, place.as_json).settings(create=True))
+    services = make_services(Place(home, place.as_json).settings(create=True), durable=False)
     upkeep.migrate(services)
     with place.progress("Living through the past") as progress:
         built = build_demo(services, days, progress)

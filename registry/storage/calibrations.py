@@ -74,7 +74,7 @@ def add(
         recorded_by=by,
         reinstates=reinstates,
     )
-    c.execute(insert(calibrations).values(**_values(made)))
+    c.execute(insert(calibrations), _values(made))
     if result.runs:
         c.execute(insert(calibration_runs), [_run_values(calibration_id, i, run) for i, run in enumerate(result.runs)])
     add_standing(c, calibration_id, "proposed", recorded_at, by, result.note)

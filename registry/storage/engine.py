@@ -13,7 +13,6 @@ import threading
 from collections.abc import Iterator
 from contextlib import closing, contextmanager
 from pathlib import Path
-from typing import Any
 
 from sqlalchemy import Connection, Engine, create_engine, event, make_url
 from sqlalchemy.exc import DBAPIError as DatabaseError
@@ -30,8 +29,14 @@ _WRITER_LOCK = 0x726F6C6C
 _writing_in = threading.local()
 
 
-def make_engine(url: str) -> Engine:
+def make_engine(url: str, *, durable: bool = True) -> Engine:
     """An engine for SQLite or PostgreSQL. Opens no connection.
+
+    Parameters
+    ----------
+    durable
+        Whether each commit waits until it is on the disk. Without it a SQLite database stays whole when the power
+        fails, but may have lost what was committed last: right for a demo, which can be built again.
 
     Raises
     ------
@@ -42,17 +47,18 @@ def make_engine(url: str) -> Engine:
         if make_url(url).database in (None, "", ":memory:"):
             raise ValueError("an in-memory database is another one in every thread: name a file")
         engine = create_engine(url, connect_args={"isolation_level": None, "timeout": BUSY_TIMEOUT_S}, max_overflow=30)
-        event.listen(engine, "connect", _prepare_sqlite)
+        synchronous = "FULL" if durable else "NORMAL"
+        event.listen(engine, "connect", lambda connection, _record: _prepare_sqlite(connection, synchronous))
         return engine
     return create_engine(url, max_overflow=30, pool_pre_ping=True)
 
 
-def _prepare_sqlite(connection: sqlite3.Connection, _record: Any) -> None:
+def _prepare_sqlite(connection: sqlite3.Connection, synchronous: str) -> None:
     """Pragmas hold for one connection and must come before its first transaction."""
-    cursor = connection.cursor()
-    for pragma in ("journal_mode=WAL", "synchronous=FULL", "foreign_keys=ON", "cache_size=-16000", "temp_store=MEMORY"):
-        cursor.execute(f"PRAGMA {pragma}")
-    cursor.close()
+    for pragma in (
+        "journal_mode=WAL", f"synchronous={synchronous}", "foreign_keys=ON", "cache_size=-16000", "temp_store=MEMORY"
+    ):  # fmt: skip
+        connection.execute(f"PRAGMA {pragma}").close()
 
 
 @contextmanager

@@ -20,7 +20,7 @@ _NEWEST_FIRST = (evaluations.c.as_of.desc(), evaluations.c.sequence.desc())
 
 def add(c: Connection, evaluation: Evaluation) -> None:
     """Record an evaluation."""
-    c.execute(insert(evaluations).values(**_values(evaluation)))
+    c.execute(insert(evaluations), _values(evaluation))
 
 
 def latest(c: Connection, vehicle_id: str, until: datetime | None = None) -> Evaluation | None:

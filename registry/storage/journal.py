@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import hashlib
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 from datetime import UTC, datetime, timedelta
 from typing import Any
 
@@ -22,6 +22,7 @@ from registry.storage.pages import Page, page_of
 from registry.storage.tables import journal
 
 BEGINNING = "0" * 64
+_LAST = select(journal.c.entry, journal.c.hash).order_by(journal.c.entry.desc()).limit(1)
 _EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
 
 
@@ -46,7 +47,7 @@ def write(
     what
         What was done, as plain values; stored as JSON text.
     """
-    last = c.execute(select(journal.c.entry, journal.c.hash).order_by(journal.c.entry.desc()).limit(1)).first()
+    last = c.execute(_LAST).first()
     number, previous = (1, BEGINNING) if last is None else (last.entry + 1, last.hash)
     text = canonical_json(what)
     made = JournalEntry(
@@ -59,18 +60,7 @@ def write(
         previous_hash=previous,
         hash=_hash(previous, number, at, (actor, action, vehicle_id, text)),
     )
-    c.execute(
-        insert(journal).values(
-            entry=made.entry,
-            at=made.at,
-            who=made.who,
-            action=made.action,
-            vehicle_id=made.vehicle_id,
-            what=made.what,
-            previous_hash=made.previous_hash,
-            hash=made.hash,
-        )
-    )
+    c.execute(insert(journal), asdict(made))
     return made
 
 

@@ -17,7 +17,7 @@ from registry.storage.tables import maintenance
 
 def add(c: Connection, entry: Maintenance) -> None:
     """Record work done."""
-    c.execute(insert(maintenance).values(**asdict(entry)))
+    c.execute(insert(maintenance), asdict(entry))
 
 
 def page(c: Connection, vehicle_id: str, limit: int, after: str | None) -> Page[Maintenance]:

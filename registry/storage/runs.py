@@ -33,10 +33,10 @@ _BATCH = 500
 
 def add(c: Connection, run: Run, counts_blob: bytes, map_blob: bytes | None) -> None:
     """Record a run with its counts and, when it has one, its closure map; ``run.use`` is its first state."""
-    c.execute(insert(runs).values(**_values(run)))
-    c.execute(insert(run_counts).values(run_id=run.run_id, counts=counts_blob))
+    c.execute(insert(runs), _values(run))
+    c.execute(insert(run_counts), {"run_id": run.run_id, "counts": counts_blob})
     if map_blob is not None:
-        c.execute(insert(run_maps).values(run_id=run.run_id, map=map_blob))
+        c.execute(insert(run_maps), {"run_id": run.run_id, "map": map_blob})
     add_state(c, run.run_id, RunState(run.use, run.reasons, run.recorded_at, run.recorded_by))
 
 
@@ -154,14 +154,13 @@ def maps(c: Connection, run_ids: Iterable[str]) -> dict[str, bytes]:
 def put_map(c: Connection, run_id: str, blob: bytes) -> None:
     """Keep a run's closure map in place of the one before it: it is derived from the counts."""
     c.execute(run_maps.delete().where(run_maps.c.run_id == run_id))
-    c.execute(insert(run_maps).values(run_id=run_id, map=blob))
+    c.execute(insert(run_maps), {"run_id": run_id, "map": blob})
 
 
 def add_state(c: Connection, run_id: str, state: RunState) -> None:
     """Record what a run may be used for from now on."""
-    c.execute(
-        insert(run_states).values(run_id=run_id, use=state.use, reasons=list(state.reasons), at=state.at, by=state.by)
-    )
+    values = {"run_id": run_id, "use": state.use, "reasons": list(state.reasons), "at": state.at, "by": state.by}
+    c.execute(insert(run_states), values)
 
 
 def states(c: Connection, run_id: str) -> list[RunState]:

@@ -38,7 +38,7 @@ def add_version(
         recorded_at=recorded_at,
         recorded_by=by,
     )
-    c.execute(insert(vehicle_versions).values(**_values(made)))
+    c.execute(insert(vehicle_versions), _values(made))
     return made
 
 

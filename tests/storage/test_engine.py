@@ -99,6 +99,13 @@ def test_the_journal_mode_lets_readers_go_on_while_one_writes(services):
         assert c.exec_driver_sql("PRAGMA synchronous").scalar_one() == 2
 
 
+def test_only_what_can_be_built_again_may_do_without_waiting_for_the_disk(tmp_path):
+    engine = make_engine(f"sqlite:///{tmp_path / 'demo.db'}", durable=False)
+    with reading(engine) as c:
+        assert c.exec_driver_sql("PRAGMA synchronous").scalar_one() == 1
+    engine.dispose()
+
+
 @pytest.mark.parametrize("url", ["sqlite://", "sqlite:///:memory:"])
 def test_a_database_in_memory_is_refused(url):
     with pytest.raises(ValueError, match="name a file"):
