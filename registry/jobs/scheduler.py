@@ -103,9 +103,7 @@ def look(services: Services, holder: str) -> Look:
     if last is not None and now - last < timedelta(seconds=services.settings.evaluate_every_s):
         return Look(now, None, "no pass is due")
     try:
-        outcome = run_pass(
-            services, progress=_renewing(services, holder, now), holder=Holder(LEASE, holder, fence)
-        )
+        outcome = run_pass(services, progress=_renewing(services, holder, now), holder=Holder(LEASE, holder, fence))
     except LeaseLost:
         return Look(now, None, "another process took the pass over")
     with services.write() as c:

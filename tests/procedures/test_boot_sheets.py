@@ -235,9 +235,7 @@ def test_a_reinstated_calibration_is_as_old_as_the_one_whose_values_it_carries(
     assert awaited.kind == "pressure_set"
 
 
-def test_a_provisional_one_never_reads_good_and_a_question_goes_first(
-    services, proposer, technician, approver, clock
-):
+def test_a_provisional_one_never_reads_good_and_a_question_goes_first(services, proposer, technician, approver, clock):
     provisional = replace(proposer.result(), kind="provisional")
     first = proposer.adopt(result=provisional)
     assert sheet(services).condition == "provisional"
