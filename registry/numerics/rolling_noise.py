@@ -26,6 +26,8 @@ from registry.numerics.kinematics import path, sinc_and_slope
 
 #: The two Gauss-Legendre points on [0, 1]; each carries half the weight.
 GAUSS_POINTS = (0.5 - 0.5 / 3.0**0.5, 0.5 + 0.5 / 3.0**0.5)
+#: Samples taken at a time: the memory does not grow with the run.
+_CHUNK = 65_536
 
 
 def noise_covariance(left_ticks: Float, right_ticks: Float, parameters: Float) -> Float:
@@ -38,12 +40,20 @@ def noise_covariance(left_ticks: Float, right_ticks: Float, parameters: Float) -
     parameters : (3,) float
         Metres per tick left and right, effective width in metres.
     """
-    k_left, k_right, width = (float(value) for value in parameters)
     poses = path(left_ticks, right_ticks, parameters)
+    result = np.zeros((3, 3))
+    for begin in range(0, left_ticks.size, _CHUNK):
+        part = slice(begin, begin + _CHUNK)
+        result += _of_part(left_ticks[part], right_ticks[part], parameters, poses[:-1][part], poses[-1])
+    return result
+
+
+def _of_part(left_ticks: Float, right_ticks: Float, parameters: Float, start: Float, end: Float) -> Float:
+    """What some samples, with the poses (n, 3) before each, add to the covariance at the end (3,)."""
+    k_left, k_right, width = (float(value) for value in parameters)
     left, right = k_left * left_ticks, k_right * right_ticks
     turn = (right - left) / width
     advance = 0.5 * (left + right)
-    start, end = poses[:-1], poses[-1]
     result = np.zeros((3, 3))
     for point in GAUSS_POINTS:
         step = point * advance * sinc_and_slope(0.5 * point * turn)[0]
