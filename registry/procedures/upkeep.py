@@ -59,7 +59,7 @@ def require_ready(services: Services) -> None:
 
 
 def check(services: Services) -> list[str]:
-    """Look for damage: schema, journal chain, foreign keys, stored digests, boot sheets.
+    """Look for damage: the file itself, foreign keys, journal chain, stored digests, boot sheets.
 
     Returns
     -------
@@ -68,7 +68,13 @@ def check(services: Services) -> list[str]:
     """
     require_ready(services)
     with services.read() as c:
-        return [*journal.verify(c), *schema.broken_references(c), *_damaged_counts(c), *_wrong_sheets(c)]
+        return [
+            *schema.damaged_pages(c),
+            *schema.broken_references(c),
+            *journal.verify(c),
+            *_damaged_counts(c),
+            *_wrong_sheets(c),
+        ]
 
 
 def backup(services: Services, path: Path) -> None:

@@ -71,3 +71,14 @@ def broken_references(c: Connection) -> list[str]:
         return []
     rows = c.exec_driver_sql("PRAGMA foreign_key_check").all()
     return [f"row {row[1]} of {row[0]} points to a row of {row[2]} that is not there" for row in rows]
+
+
+def damaged_pages(c: Connection) -> list[str]:
+    """What the database itself finds wrong with its file; PostgreSQL looks after its own."""
+    if c.dialect.name != "sqlite":
+        return []
+    return [
+        f"the database file is damaged: {said}"
+        for said in c.exec_driver_sql("PRAGMA quick_check").scalars()
+        if said != "ok"
+    ]

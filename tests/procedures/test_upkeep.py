@@ -45,6 +45,18 @@ def test_damage_is_found_and_named(full, sql, finding):
     assert any(finding in one for one in tamper(full, sql))
 
 
+def test_a_damaged_file_is_found(full):
+    with full.read() as c:
+        index = "SELECT rootpage FROM sqlite_master WHERE name = 'ix_alert_events_alert_id_sequence'"
+        page = c.exec_driver_sql(index).scalar_one()
+        size = c.exec_driver_sql("PRAGMA page_size").scalar_one()
+    full.close()  # the last connection folds the write-ahead log into the file
+    with (full.settings.home / "rollbook.db").open("r+b") as file:
+        file.seek((page - 1) * size)
+        file.write(b"\xff" * 200)
+    assert any("the database file is damaged" in one for one in upkeep.check(full))
+
+
 def test_a_row_that_points_nowhere_is_found(full):
     with sqlite3.connect(full.settings.home / "rollbook.db") as loose:
         loose.execute("DELETE FROM vehicle_versions")

@@ -7,6 +7,7 @@ from pathlib import Path
 
 import pytest
 
+from registry.errors import Unready
 from registry.services import Services
 from registry.storage.engine import DatabaseError, copy_sqlite, make_engine, reading, writing
 
@@ -74,6 +75,20 @@ def test_a_writer_inside_a_writer_is_refused_at_once_instead_of_waiting_for_itse
     with services.write() as c:
         insert(c, "after")
     assert count(services) == 1
+
+
+def test_a_writer_that_waited_in_vain_says_who_is_in_the_way(services, tmp_path, monkeypatch):
+    monkeypatch.setattr("registry.storage.engine.BUSY_TIMEOUT_S", 0.05)
+    hurried = make_engine(services.settings.database_url)
+    with services.write(), pytest.raises(Unready, match="another process has been writing"), writing(hurried):
+        pass
+    hurried.dispose()
+
+
+def test_a_database_that_cannot_be_reached_is_said(tmp_path):
+    engine = make_engine(f"sqlite:///{tmp_path / 'nowhere' / 'rollbook.db'}")
+    with pytest.raises(Unready, match="cannot be reached"), reading(engine):
+        pass
 
 
 def test_two_databases_may_be_written_together(services, tmp_path):
