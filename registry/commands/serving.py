@@ -9,7 +9,7 @@ import click
 
 from registry.commands import http_server, logs
 from registry.commands.session import Place, with_home
-from registry.jobs.scheduler import Schedule, start_schedule
+from registry.jobs.scheduler import Schedule, start_schedule, work_until_signal
 from registry.services import Services
 
 WORKERS = 2
@@ -79,6 +79,4 @@ def worker(place: Place) -> None:
     """Run the schedule alone until stopped. Several may run: one works at a time."""
     logs.configure()
     session = place.open(create=True)
-    schedule = start_schedule(session.services)
-    place.say("The schedule runs (Ctrl+C stops).")
-    schedule.wait_for_signal()
+    work_until_signal(session.services, lambda: place.say("The schedule runs (Ctrl+C stops)."))

@@ -62,14 +62,6 @@ class Schedule:
             with self.services.write() as c:
                 leases.release(c, LEASE, self.holder, self.services.now())
 
-    def wait_for_signal(self) -> None:
-        """Block until SIGTERM or SIGINT, then stop. Belongs in the main thread of a process that does nothing else."""
-        asked = threading.Event()
-        for number in (signal.SIGTERM, signal.SIGINT):
-            signal.signal(number, lambda _number, _frame: asked.set())
-        asked.wait()
-        self.stop()
-
 
 def start_schedule(services: Services) -> Schedule:
     """Start looking, in a thread of its own. The first look is made at once."""
@@ -86,6 +78,29 @@ def start_schedule(services: Services) -> Schedule:
     )
     schedule._scheduler = scheduler
     scheduler.start()
+    return schedule
+
+
+def work_until_signal(services: Services, ready: Callable[[], None]) -> Schedule:
+    """Run the schedule until SIGTERM or SIGINT; a pass that is running is finished. Belongs in the main thread.
+
+    Parameters
+    ----------
+    ready
+        Called once a signal would be heard and the schedule runs.
+
+    Returns
+    -------
+    Schedule
+        The stopped schedule, with what came of its looks.
+    """
+    asked = threading.Event()
+    for number in (signal.SIGTERM, signal.SIGINT):
+        signal.signal(number, lambda _number, _frame: asked.set())
+    schedule = start_schedule(services)
+    ready()
+    asked.wait()
+    schedule.stop()
     return schedule
 
 

@@ -96,9 +96,7 @@ from registry.services import make_services
 from registry.settings import Settings
 
 settings = replace(Settings.from_environment(Path(sys.argv[1])), evaluate_every_s=0.3)
-schedule = scheduler.start_schedule(make_services(settings))
-print("started", flush=True)
-schedule.wait_for_signal()
+schedule = scheduler.work_until_signal(make_services(settings), lambda: print("started", flush=True))
 passes = sum(one.outcome is not None for one in schedule.looks)
 waits = sum(one.said == "another process works" for one in schedule.looks)
 print(passes, waits, len(schedule.failures), flush=True)
