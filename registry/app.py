@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from flask import Flask, request
+from flask import Flask, Request, request
+from flask.sessions import SecureCookieSession, SecureCookieSessionInterface
 from werkzeug.wrappers import Response
 
 from registry.api import document, doors, problems
@@ -20,10 +21,20 @@ def create_app(services: Services) -> Flask:
         What everything works with; passed on to every room.
     """
     app = document.make_app("registry", static_folder=None)
+    app.session_interface = _PageSessions()
     doors.register(app, services)
     pages.register(app, services)
     app.register_error_handler(Exception, _answer)
     return app
+
+
+class _PageSessions(SecureCookieSessionInterface):
+    """Pages have a session in a cookie; machines bring their key each time, and their answers vary with no cookie."""
+
+    def open_session(self, app: Flask, request: Request) -> SecureCookieSession | None:
+        if problems.is_for_machines(request.path):
+            return self.make_null_session(app)
+        return super().open_session(app, request)
 
 
 def _answer(error: Exception) -> Response:

@@ -7,6 +7,7 @@ from typing import Annotated, Any, Literal
 
 from flask import Response, request
 from pydantic import ConfigDict, Field
+from werkzeug.datastructures import Headers
 
 from registry.api import fields, keys
 from registry.api.bodies import Answer, Query, VehiclePath
@@ -18,6 +19,8 @@ from registry.procedures import boot
 doors = resource("parameters")
 
 _LINES = "text/plain"
+#: A copy may be kept by who asked, and is asked about each time.
+_KEPT = (("Cache-Control", "private, no-cache"), ("Vary", "Accept, Authorization"))
 _TAGGED: dict[str, Any] = {"ETag": {"description": "Changes with any byte of the answer", "schema": {"type": "string"}}}
 
 
@@ -84,15 +87,16 @@ def get_parameters(path: VehiclePath, query: ParametersQuery) -> Response:
 
 def _written(sheet: BootSheet, key32: bytes) -> Response:
     """The sheet in the form that was asked for, or 304 when the asker has it."""
-    if _form() == _LINES:
+    form = _form()
+    if form == _LINES:
         body = boot.render_lines(sheet, key32)
         etag = boot.etag_of(body)
     else:
         body, etag = boot.render(sheet, key32)
-    headers = {"ETag": f'"{etag}"', "Cache-Control": "private, no-cache", "Vary": "Accept, Authorization"}
-    if request.if_none_match.contains_weak(etag):
+    headers = Headers([("ETag", f'"{etag}"'), *_KEPT])
+    if "If-None-Match" in request.headers and request.if_none_match.contains_weak(etag):
         return Response(status=304, headers=headers)
-    return Response(body, mimetype=_form(), headers=headers)
+    return Response(body, mimetype=form, headers=headers)
 
 
 def _form() -> Literal["application/json", "text/plain"]:

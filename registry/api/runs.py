@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import Annotated
+from typing import Annotated, cast
 
 from flask import Response, request
 from pydantic import Field
@@ -11,6 +11,7 @@ from registry.api import bodies, fields
 from registry.api.bodies import Answer, Body, Described, PageAnswer, PageQuery, RunPath, VehiclePath, reply
 from registry.api.document import CONFLICTS, resource
 from registry.api.keys import actor, needs, services
+from registry.api.strict_json import StrictRequest
 from registry.domain.run import ClosureStatement, Conditions, Run, Use
 from registry.procedures import intake
 from registry.procedures.intake import RunStatement
@@ -154,7 +155,7 @@ def post_run(path: VehiclePath, body: RunBody) -> Response:
     The same key with the same content again answers 200, with other content 409. A run that is well-formed but cannot
     be used is kept `set aside`, with the reasons.
     """
-    statement = body.statement(intake.content_digest(request.get_json()))
+    statement = body.statement(intake.content_digest(cast(StrictRequest, request).take_json()))
     run, created = intake.take_run(services(), actor(), path.vehicle_id, statement)
     return reply(described(run), 201 if created else 200)
 

@@ -128,6 +128,7 @@ def parsed(data: bytes | bytearray) -> dict[str, Any]:
         JSON, but not an object.
     """
     text = _decoded(data)
+    del data  # a long run is tens of megabytes, and the tree is about to take five times as much
     if text.count(",") > MAX_COMMAS:
         raise TooLarge(f"more than {MAX_SAMPLES:,} samples: split the run")
     odd: list[Any] = []
@@ -239,3 +240,9 @@ class StrictRequest(Request):
                 )
             self._strict_json = parsed(unpacked(data, self.headers.get("Content-Encoding", "")))
         return self._strict_json
+
+    def take_json(self) -> dict[str, Any]:
+        """Read the body as `get_json` does, and keep it no longer: a long run is not held while it is worked on."""
+        taken: dict[str, Any] = self.get_json()
+        self._strict_json = None
+        return taken
