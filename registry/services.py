@@ -10,7 +10,7 @@ from functools import partial
 
 from registry import clock
 from registry.settings import Settings
-from registry.storage.engine import Connection, make_engine, reading, writing
+from registry.storage.engine import Bare, Connection, asking, make_engine, reading, writing
 
 
 @dataclass(frozen=True)
@@ -19,7 +19,8 @@ class Services:
 
     ``read`` and ``write`` answer a transaction to be used in a ``with``; ``write`` commits at its end and rolls back on
     an exception. There is one writer at a time, so what a writer has read still holds when it writes. ``close`` gives
-    the kept connections back; the next transaction opens new ones.
+    the kept connections back; the next transaction opens new ones. ``ask`` answers a bare connection for the single
+    prepared query of a boot.
     """
 
     settings: Settings
@@ -27,6 +28,7 @@ class Services:
     new_id: Callable[[], str]
     read: Callable[[], AbstractContextManager[Connection]]
     write: Callable[[], AbstractContextManager[Connection]]
+    ask: Callable[[], AbstractContextManager[Bare]]
     close: Callable[[], None]
 
 
@@ -45,5 +47,6 @@ def make_services(settings: Settings, *, durable: bool = True) -> Services:
         new_id=clock.new_id,
         read=partial(reading, engine),
         write=partial(writing, engine),
+        ask=partial(asking, engine),
         close=engine.dispose,
     )

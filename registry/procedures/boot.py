@@ -65,11 +65,14 @@ def fetch(services: Services, key: str, vehicle_id: str) -> tuple[BootSheet, byt
         No such vehicle, or nothing for it to load.
     """
     key32 = hashlib.sha256(key.encode()).digest()
-    with services.read() as c:
-        owner, sheet = boots.sheet_with_key(c, key32.hex(), vehicle_id)
-        actor = actor_of(owner)
-        if actor is None:
-            raise NotSignedIn("send a valid API key as 'Authorization: Bearer KEY'")
-        require_vehicle(actor, vehicle_id, "reader")
-        # Nothing kept: building says which of the two it is, no such vehicle or nothing in force.
-        return sheet or build_sheet(c, vehicle_id), key32
+    with services.ask() as bare:
+        owner, sheet = boots.sheet_with_key(bare, key32.hex(), vehicle_id)
+    actor = actor_of(owner)
+    if actor is None:
+        raise NotSignedIn("send a valid API key as 'Authorization: Bearer KEY'")
+    require_vehicle(actor, vehicle_id, "reader")
+    if sheet is None:
+        # Building says which of the two it is: no such vehicle, or nothing in force.
+        with services.read() as c:
+            sheet = build_sheet(c, vehicle_id)
+    return sheet, key32

@@ -12,7 +12,7 @@ from sqlalchemy.sql.compiler import SQLCompiler
 
 from registry.domain.boot import Boot, BootSheet, BootStatement
 from registry.domain.person import KeyOwner
-from registry.storage.engine import Connection
+from registry.storage.engine import Bare, Connection
 from registry.storage.pages import Page, page_of
 from registry.storage.tables import boot_sheets, boots, issued_digests, keys, people
 
@@ -112,15 +112,15 @@ def all_sheets(c: Connection) -> dict[str, BootSheet]:
     return {row.sheet_vehicle_id: _sheet(row) for row in c.execute(select(*_SHEET).where(true()))}
 
 
-def sheet_with_key(c: Connection, key_hash: str, vehicle_id: str) -> tuple[KeyOwner | None, BootSheet | None]:
+def sheet_with_key(bare: Bare, key_hash: str, vehicle_id: str) -> tuple[KeyOwner | None, BootSheet | None]:
     """The owner of a valid key and the sheet of a vehicle, in one query; without an owner there is no sheet either.
 
     Why this form: it is asked at every boot. The query is compiled once for a kind of database and handed to the
     driver as it is, which costs a third of what the statement object does.
     """
-    sql, names = _prepared(c.dialect.name, c.dialect)
+    sql, names = _prepared(bare.dialect)
     given = {"hash": key_hash, "vehicle": vehicle_id}
-    cursor = c.connection.cursor()
+    cursor = bare.connection.cursor()
     try:
         cursor.execute(sql, given if names is None else tuple(given[name] for name in names))
         row = cursor.fetchone()
@@ -135,8 +135,9 @@ def sheet_with_key(c: Connection, key_hash: str, vehicle_id: str) -> tuple[KeyOw
 _compiled: dict[str, tuple[str, list[str] | None]] = {}
 
 
-def _prepared(name: str, dialect: Dialect) -> tuple[str, list[str] | None]:
+def _prepared(dialect: Dialect) -> tuple[str, list[str] | None]:
     """The boot query as text for a kind of database, and the order of its parameters where they have no names."""
+    name = dialect.name
     if name not in _compiled:
         made = _SHEET_WITH_KEY.compile(dialect=dialect)
         names = made.positiontup if isinstance(made, SQLCompiler) and made.positional else None

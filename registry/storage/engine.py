@@ -12,15 +12,16 @@ import sqlite3
 import threading
 from collections.abc import Iterator
 from contextlib import closing, contextmanager
+from dataclasses import dataclass
 from pathlib import Path
 
-from sqlalchemy import Connection, Engine, create_engine, event, make_url
+from sqlalchemy import Connection, Dialect, Engine, PoolProxiedConnection, create_engine, event, make_url
 from sqlalchemy.exc import DBAPIError as DatabaseError
 from sqlalchemy.exc import OperationalError
 
 from registry.errors import Unready
 
-__all__ = ["Connection", "DatabaseError", "Engine", "make_engine", "reading", "writing"]
+__all__ = ["Bare", "Connection", "DatabaseError", "Engine", "asking", "make_engine", "reading", "writing"]
 
 #: A writer waits this long for the one before it. Writes last milliseconds; a bulk load may hold the lock for seconds.
 BUSY_TIMEOUT_S = 30
@@ -73,12 +74,42 @@ def reading(engine: Engine) -> Iterator[Connection]:
     with _connected(engine) as c:
         driver = c.connection.driver_connection
         if isinstance(driver, sqlite3.Connection):
-            # Said to the driver itself: this is on the path of every boot, and the long way costs more than the query.
+            # Said to the driver itself: the long way costs more than most queries.
             driver.execute("BEGIN")
         else:
             c.exec_driver_sql("SET TRANSACTION ISOLATION LEVEL REPEATABLE READ READ ONLY")
         yield c
         # Closing rolls back, whether or not anything was asked.
+
+
+@dataclass(frozen=True)
+class Bare:
+    """A connection of the driver's own, for one prepared question, with the kind of database it leads to."""
+
+    connection: PoolProxiedConnection
+    dialect: Dialect
+
+
+@contextmanager
+def asking(engine: Engine) -> Iterator[Bare]:
+    """A bare connection for a single query, which sees one state of the record by itself.
+
+    Why this form: at every boot one query is asked, and a third of its time is the query. A transaction with its
+    connection object costs 40 µs more.
+
+    Raises
+    ------
+    Unready
+        The database cannot be reached or read.
+    """
+    try:
+        connection = engine.raw_connection()
+        try:
+            yield Bare(connection, engine.dialect)
+        finally:
+            connection.close()
+    except engine.dialect.loaded_dbapi.Error as error:
+        raise Unready(f"the database cannot be read ({error}): run 'rollbook migrate'") from error
 
 
 @contextmanager

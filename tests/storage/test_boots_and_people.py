@@ -45,15 +45,16 @@ def test_the_key_and_the_sheet_of_a_boot_come_in_one_query(services, clock, prop
     with services.write() as c:
         boots.put_sheet(c, "tub-7", sheet)
         people.add_key(c, key)
-    with services.read() as c:
+    with services.ask() as bare:
         sent: list[str] = []
         owner = KeyOwner(None, "tub-7", None)
-        c.connection.driver_connection.set_trace_callback(sent.append)
-        assert boots.sheet_with_key(c, key.key_hash, "tub-7") == (owner, sheet)
+        bare.connection.driver_connection.set_trace_callback(sent.append)
+        assert boots.sheet_with_key(bare, key.key_hash, "tub-7") == (owner, sheet)
         assert len(sent) == 1
-        c.connection.driver_connection.set_trace_callback(None)
-        assert boots.sheet_with_key(c, key.key_hash, "tub-8") == (owner, None)
-        assert boots.sheet_with_key(c, "0" * 64, "tub-7") == (None, None)
+        bare.connection.driver_connection.set_trace_callback(None)
+        assert boots.sheet_with_key(bare, key.key_hash, "tub-8") == (owner, None)
+        assert boots.sheet_with_key(bare, "0" * 64, "tub-7") == (None, None)
+    with services.read() as c:
         assert boots.sheet(c, "tub-7") == sheet
         assert boots.all_sheets(c) == {"tub-7": sheet}
     with services.write() as c:
@@ -68,9 +69,9 @@ def test_a_revoked_key_has_no_owner_and_a_persons_key_has_a_role(services, clock
         people.add(c, Person("Kim", "keeper", "hash", clock()))
         people.add_key(c, revoked)
         people.add_key(c, key_of("k2", clock, person="Kim"))
-    with services.read() as c:
-        assert boots.sheet_with_key(c, revoked.key_hash, "tub-7") == (None, None)
-        owner, sheet = boots.sheet_with_key(c, "k2".ljust(64, "0"), "tub-7")
+    with services.ask() as bare:
+        assert boots.sheet_with_key(bare, revoked.key_hash, "tub-7") == (None, None)
+        owner, sheet = boots.sheet_with_key(bare, "k2".ljust(64, "0"), "tub-7")
     assert owner == KeyOwner("Kim", None, "keeper")
     assert sheet is not None
     assert sheet.calibration_number == 1

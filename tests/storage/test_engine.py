@@ -9,7 +9,7 @@ import pytest
 
 from registry.errors import Unready
 from registry.services import Services
-from registry.storage.engine import DatabaseError, copy_sqlite, make_engine, reading, writing
+from registry.storage.engine import DatabaseError, asking, copy_sqlite, make_engine, reading, writing
 
 
 def count(services: Services) -> int:
@@ -89,6 +89,15 @@ def test_a_database_that_cannot_be_reached_is_said(tmp_path):
     engine = make_engine(f"sqlite:///{tmp_path / 'nowhere' / 'rollbook.db'}")
     with pytest.raises(Unready, match="cannot be reached"), reading(engine):
         pass
+    with pytest.raises(Unready, match="cannot be read"), asking(engine):
+        pass
+
+
+def test_a_question_to_a_database_without_tables_says_to_migrate(tmp_path):
+    engine = make_engine(f"sqlite:///{tmp_path / 'empty.db'}")
+    with pytest.raises(Unready, match="rollbook migrate"), asking(engine) as bare:
+        bare.connection.cursor().execute("SELECT 1 FROM keys")
+    engine.dispose()
 
 
 def test_two_databases_may_be_written_together(services, tmp_path):
