@@ -6,7 +6,7 @@ import os
 import secrets
 import tempfile
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TypeVar
 
@@ -27,12 +27,12 @@ class Settings:
 
     home: Path
     database_url: str
-    secret_key: str
+    secret_key: str = field(repr=False)
     evaluate_every_s: float = 6 * 3600.0
     window_runs: int = 60
     silence_days: float = 30.0
     two_person: bool = False
-    key: str | None = None
+    key: str | None = field(default=None, repr=False)
 
     @classmethod
     def from_environment(cls, home: Path | None = None, *, create: bool = True) -> Settings:
@@ -57,7 +57,7 @@ class Settings:
         folder = (home or Path(variables.get("ROLLBOOK_HOME") or "rollbook-home")).expanduser().absolute()
         elsewhere = variables.get("ROLLBOOK_DATABASE_URL")
         if create:
-            folder.mkdir(parents=True, exist_ok=True)
+            folder.mkdir(mode=0o700, parents=True, exist_ok=True)
         elif not (folder.is_dir() if elsewhere else (folder / "rollbook.db").is_file()):
             raise Unready(
                 f"there is no home at {folder}: name it with --home or ROLLBOOK_HOME, or run 'rollbook migrate'"

@@ -79,6 +79,8 @@ def test_the_secret_key_is_made_once_and_readable_by_its_owner_only(bare, tmp_pa
     path = tmp_path / "home" / "secret_key"
     assert stat.S_IMODE(path.stat().st_mode) == 0o600
     assert [one.name for one in (tmp_path / "home").iterdir()] == ["secret_key"]
+    assert stat.S_IMODE((tmp_path / "home").stat().st_mode) == 0o700
+    assert first.secret_key not in repr(first)
 
 
 def test_processes_that_start_together_agree_on_one_secret(bare, tmp_path):
