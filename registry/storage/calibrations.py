@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from dataclasses import replace
 from datetime import datetime
 from typing import Any
@@ -125,6 +125,13 @@ def by_number(c: Connection, vehicle_id: str, number: int) -> Calibration:
     if found is None:
         raise NotFound(f"vehicle {vehicle_id!r} has no calibration number {number}")
     return found
+
+
+def numbers_of(c: Connection, calibration_ids: Iterable[str]) -> dict[str, int]:
+    """The number of each of some calibrations, by identity."""
+    numbered = select(calibrations.c.calibration_id, calibrations.c.number)
+    rows = c.execute(numbered.where(calibrations.c.calibration_id.in_(list(calibration_ids))))
+    return {row.calibration_id: row.number for row in rows}
 
 
 def page(c: Connection, vehicle_id: str, limit: int, after: str | None) -> Page[Calibration]:
