@@ -67,6 +67,7 @@ class _Standing:
     evaluation: Evaluation | None
     in_force: InForce | None
     boot: Boot | None
+    booted_number: int | None
 
 
 def of_fleet(c: Connection, versions: Sequence[VehicleVersion]) -> dict[str, Described]:
@@ -82,6 +83,7 @@ def of_fleet(c: Connection, versions: Sequence[VehicleVersion]) -> dict[str, Des
     evaluated = evaluations.latest_all(c)
     in_force = calibrations.all_in_force(c)
     booted = boots.latest_all(c)
+    numbers = calibrations.numbers_of(c, {boot.calibration_id for boot in booted.values() if boot.calibration_id})
     return {
         version.vehicle_id: _described(
             version,
@@ -90,6 +92,7 @@ def of_fleet(c: Connection, versions: Sequence[VehicleVersion]) -> dict[str, Des
                 evaluated.get(version.vehicle_id),
                 in_force.get(version.vehicle_id),
                 booted.get(version.vehicle_id),
+                _booted_number(booted.get(version.vehicle_id), numbers),
             ),
         )
         for version in versions
@@ -99,15 +102,25 @@ def of_fleet(c: Connection, versions: Sequence[VehicleVersion]) -> dict[str, Des
 def of_vehicle(c: Connection, version: VehicleVersion) -> Described:
     """The overview of one vehicle."""
     vehicle_id = version.vehicle_id
+    boot = boots.latest(c, vehicle_id)
+    numbers = calibrations.numbers_of(c, [boot.calibration_id]) if boot and boot.calibration_id else {}
     return _described(
         version,
         _Standing(
             len(alerts.open_for(c, vehicle_id)),
             evaluations.latest(c, vehicle_id),
             calibrations.in_force(c, vehicle_id),
-            boots.latest(c, vehicle_id),
+            boot,
+            _booted_number(boot, numbers),
         ),
     )
+
+
+def _booted_number(boot: Boot | None, numbers: dict[str, int]) -> int | None:
+    """The number of what a vehicle booted on: by what its statement turned out to mean, else as stated."""
+    if boot is None:
+        return None
+    return boot.statement.calibration_number if boot.calibration_id is None else numbers[boot.calibration_id]
 
 
 def _described(version: VehicleVersion, standing: _Standing) -> Described:
@@ -125,7 +138,7 @@ def _described(version: VehicleVersion, standing: _Standing) -> Described:
         "drives_on": boot
         and {
             "calibration_id": boot.calibration_id,
-            "calibration_number": boot.statement.calibration_number,
+            "calibration_number": standing.booted_number,
             "source": boot.statement.source,
             "booted_at": fields.instant(boot.booted_at),
             "matched": boot.matched,

@@ -97,7 +97,8 @@ def test_a_fleet_that_fits_has_no_page_after(call):
 
 
 def test_the_overview_says_what_is_in_force_and_what_it_drives_on(call, in_force):
-    call.ok("POST", "/vehicles/LC-07/boots", "LC-07", {"calibration_number": 1, "source": "fetched"})
+    digest = call.ok("GET", "/vehicles/LC-07/parameters", "LC-07")["digest"]
+    call.ok("POST", "/vehicles/LC-07/boots", "LC-07", {"digest": digest, "source": "fetched"})
     call.ok("POST", "/vehicles/LC-08/boots", "LC-08", {"calibration_number": 4, "source": "kept"})
     listed = {item["vehicle_id"]: item["overview"] for item in call.ok("GET", "/vehicles")["items"]}
     assert listed["LC-07"] == call.ok("GET", "/vehicles/LC-07")["overview"]
