@@ -5,6 +5,7 @@ Exit codes: 0 done, 1 refused or failed, 2 wrong usage.
 
 from __future__ import annotations
 
+import errno
 import importlib
 import traceback
 from collections.abc import Callable
@@ -64,9 +65,10 @@ def _said(call: Callable[[], Any]) -> Any:
     except DatabaseError as error:
         raise click.ClickException(f"the database cannot be used ({error.orig}): see 'rollbook check'") from error
     except OSError as error:
-        if error.filename is None:
-            raise
-        raise click.ClickException(f"{error.filename} cannot be used ({error.strerror})") from error
+        if error.errno == errno.EPIPE:
+            raise  # Whoever reads has had enough, which click ends without a word.
+        what = "a file" if error.filename is None else error.filename
+        raise click.ClickException(f"{what} cannot be used ({error.strerror or error})") from error
     except (click.ClickException, click.exceptions.Exit, click.Abort):
         raise
     except Exception as error:

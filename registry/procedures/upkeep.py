@@ -83,14 +83,23 @@ def backup(services: Services, path: Path) -> None:
     Raises
     ------
     Conflict
-        There is a file at ``path`` already, or the database is PostgreSQL, which has its own tools for this.
+        There is a file at ``path`` already or none can be made there, or the database is PostgreSQL, which has its own
+        tools for this.
     """
-    if path.exists():
-        raise Conflict(f"there is a file at {path} already: name another")
     if not services.settings.database_url.startswith("sqlite"):
         raise Conflict("a PostgreSQL database is copied with its own tool, pg_dump")
-    with services.read() as c:
-        engine.copy_sqlite(c, path)
+    try:
+        path.touch(mode=0o600, exist_ok=False)  # Hashes of keys and passwords are nobody else's business.
+    except FileExistsError as error:
+        raise Conflict(f"there is a file at {path} already: name another") from error
+    except OSError as error:
+        raise Conflict(f"{path} cannot be written ({error.strerror}): name another file") from error
+    try:
+        with services.read() as c:
+            engine.copy_sqlite(c, path)
+    except BaseException:
+        path.unlink()
+        raise
 
 
 def _damaged_counts(c: Connection) -> list[str]:

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import json
-import os
 import re
 import socket
 import subprocess
@@ -347,7 +346,6 @@ def test_a_state_folder_that_cannot_be_written_still_boots_fresh_reports_and_say
     assert len(server.reports()) == 1
 
 
-@pytest.mark.skipif(os.geteuid() != 0, reason="needs root to become a user who may not write")
 def test_a_read_only_state_folder_keeps_its_copy(server: Server, vehicle: Vehicle, dead_url: str) -> None:
     server.parameters = reply(lines())
     vehicle.boot(server.url)
@@ -368,7 +366,8 @@ sys.path.insert(0, sys.argv[1])
 import boot_client, encodings.idna
 state, key, url = sys.argv[2:]
 os.chdir(state)
-os.setuid(65534)
+if os.geteuid() == 0:
+    os.setuid(65534)
 with tempfile.NamedTemporaryFile("w") as file:
     file.write(key)
     file.flush()
