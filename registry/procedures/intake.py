@@ -158,7 +158,7 @@ def _parameters_at(c: Connection, vehicle_id: str, time: datetime) -> Parameters
     held = in_force_store.in_force(c, vehicle_id, time)
     if held is None or held.calibration_id is None:
         return None
-    return calibration_store.by_id(c, held.calibration_id).result.parameters
+    return calibration_store.parameters_by_id(c, held.calibration_id)
 
 
 def _centre(c: Connection, version: VehicleVersion, now: datetime) -> Parameters:

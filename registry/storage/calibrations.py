@@ -106,6 +106,21 @@ def by_id(c: Connection, calibration_id: str) -> Calibration:
     return found[0]
 
 
+def parameters_by_id(c: Connection, calibration_id: str) -> Parameters:
+    """The parameters of one calibration alone, in one query: what every run that is taken in asks for.
+
+    Raises
+    ------
+    NotFound
+        No such calibration.
+    """
+    wanted = select(calibrations.c.left_m_per_tick, calibrations.c.right_m_per_tick, calibrations.c.width_m)
+    row = c.execute(wanted.where(calibrations.c.calibration_id == calibration_id)).one_or_none()
+    if row is None:
+        raise NotFound(f"there is no calibration {calibration_id!r}")
+    return Parameters(row.left_m_per_tick, row.right_m_per_tick, row.width_m)
+
+
 def find_by_number(c: Connection, vehicle_id: str, number: int) -> Calibration | None:
     """One calibration of a vehicle by its number, if there is one."""
     wanted = _CALIBRATIONS.where(calibrations.c.vehicle_id == vehicle_id, calibrations.c.number == number)

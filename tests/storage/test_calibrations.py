@@ -35,6 +35,7 @@ def test_a_calibration_comes_back_as_it_was_recorded(with_runs, clock):
     assert (made.number, made.standing, made.in_force_from) == (1, "proposed", None)
     with with_runs.read() as c:
         assert calibrations.by_id(c, "cal1") == made
+        assert calibrations.parameters_by_id(c, "cal1") == made.result.parameters
         assert calibrations.by_number(c, "tub-7", 1) == made
         assert calibrations.first_run_at(c, "cal1") == clock() - timedelta(days=3)
 
@@ -128,6 +129,8 @@ def test_an_unknown_calibration_is_named(with_runs):
     with with_runs.read() as c:
         with pytest.raises(NotFound, match="nothing"):
             calibrations.by_id(c, "nothing")
+        with pytest.raises(NotFound, match="nothing"):
+            calibrations.parameters_by_id(c, "nothing")
         with pytest.raises(NotFound, match="number 9"):
             calibrations.by_number(c, "tub-7", 9)
         assert calibrations.find_by_number(c, "tub-7", 9) is None
