@@ -88,8 +88,8 @@ def build_demo(
 def _planned(fleet: tuple[Vehicle, ...], calendar: Calendar, until: float) -> list[RunPlan]:
     """Runs of the whole fleet that are handed in by now, in order of time."""
     found: list[RunPlan] = []
-    for place, vehicle in enumerate(fleet):
-        found.extend(with_mishaps(list(plans(vehicle, calendar.days, place))))
+    for vehicle in fleet:
+        found.extend(with_mishaps(list(plans(vehicle, calendar.days))))
     found = [plan for plan in found if calendar.at(plan.day, plan.second_of_day).timestamp() <= until]
     return sorted(found, key=lambda plan: (plan.day, plan.second_of_day, plan.run_key))
 

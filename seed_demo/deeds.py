@@ -10,11 +10,10 @@ from dataclasses import dataclass, field, replace
 from datetime import timedelta
 from secrets import token_urlsafe
 
-from registry.jobs.fleet_pass import run_pass
-
 from registry.domain.boot import BootStatement
 from registry.domain.person import Actor, Role
 from registry.domain.vehicle import Parameters, ReferencePoint, VehicleStatement
+from registry.jobs.fleet_pass import run_pass
 from registry.procedures import adoption, alerting, baseline, boot, intake, maintenance, people, registration
 from registry.services import Services
 from registry.storage import alerts, calibrations, in_force
@@ -50,6 +49,8 @@ class Memory:
     last_run: dict[str, str] = field(default_factory=dict)
     loaded: dict[str, Loaded] = field(default_factory=dict)
     wrong: dict[str, tuple[str, int]] = field(default_factory=dict)
+    to_start: set[str] = field(default_factory=set)
+    deaf: set[str] = field(default_factory=set)
 
 
 def person(name: str) -> Actor:
@@ -126,10 +127,13 @@ def hand_in(services: Services, run: DrivenRun, memory: Memory) -> None:
     memory.session_runs.setdefault(f"{plan.vehicle.vehicle_id}/{plan.day}", []).append(taken.run_id)
 
 
-def set_new_baseline(services: Services, vehicle: Vehicle, run_ids: tuple[str, ...] | None, reason: str) -> None:
+def set_new_baseline(
+    services: Services, vehicle: Vehicle, memory: Memory, run_ids: tuple[str, ...] | None, reason: str
+) -> None:
     """The technician fits and proposes, the approver puts into force."""
     proposed = baseline.propose_baseline(services, person(TECHNICIAN), vehicle.vehicle_id, run_ids, reason)
     adoption.adopt(services, person(APPROVER), proposed.calibration_id, reason, number=proposed.number)
+    memory.to_start.add(vehicle.vehicle_id)
 
 
 def work(services: Services, vehicle: Vehicle, done: Work) -> None:
@@ -172,6 +176,7 @@ def enter_wrongly(services: Services, vehicle: Vehicle, memory: Memory) -> None:
         services, person(APPROVER), proposed.calibration_id, "paper sheet of the spring check", number=proposed.number
     )
     memory.wrong[vehicle.vehicle_id] = (proposed.calibration_id, current.number)
+    memory.to_start.add(vehicle.vehicle_id)
 
 
 def exchanged_digits(text: str) -> str:
@@ -187,6 +192,7 @@ def withdraw_wrong(services: Services, vehicle: Vehicle, memory: Memory) -> None
     calibration_id, number = memory.wrong[vehicle.vehicle_id]
     reason = "two digits of the left tick factor exchanged when it was typed"
     adoption.withdraw(services, person(APPROVER), calibration_id, reason, "reinstate", number)
+    memory.to_start.add(vehicle.vehicle_id)
 
 
 def start_up(services: Services, vehicle: Vehicle, memory: Memory, deaf: bool) -> None:
@@ -195,6 +201,7 @@ def start_up(services: Services, vehicle: Vehicle, memory: Memory, deaf: bool) -
     actor = Actor("vehicle", vehicle.vehicle_id)
     kept = memory.loaded.get(vehicle.vehicle_id)
     if deaf and kept is not None:
+        memory.deaf.add(vehicle.vehicle_id)
         age = now.timestamp() - kept.fetched
         statement = BootStatement(kept.calibration_number, kept.digest, "kept", now, age, SOFTWARE)
     else:
@@ -208,8 +215,12 @@ def evening_pass(services: Services) -> None:
     run_pass(services, as_of=services.now())
 
 
-def morning_desk(services: Services, fleet: tuple[Vehicle, ...]) -> None:
-    """See to open alerts and open proposals, as far as the stories have anybody look at them."""
+def morning_desk(services: Services, fleet: tuple[Vehicle, ...], memory: Memory) -> None:
+    """Start again what was given new parameters yesterday; see to alerts and proposals, where a story has it."""
+    for vehicle in fleet:
+        if vehicle.vehicle_id in memory.to_start:
+            start_up(services, vehicle, memory, deaf=vehicle.vehicle_id in memory.deaf)
+    memory.to_start.clear()
     stories = {vehicle.vehicle_id: vehicle.story for vehicle in fleet}
     now = services.now()
     with services.read() as c:
@@ -217,17 +228,22 @@ def morning_desk(services: Services, fleet: tuple[Vehicle, ...]) -> None:
     for alert in standing:
         story = stories.get(alert.vehicle_id or "")
         days = story.acknowledges.get(alert.content.kind) if story else None
-        if days is not None and alert.standing == "unacknowledged" and now - alert.raised_at >= timedelta(days=days):
+        if (
+            days is not None
+            and alert.standing in ("unacknowledged", "returned")
+            and now - alert.raised_at >= timedelta(days=days)
+        ):
             alerting.acknowledge(services, person(TECHNICIAN), alert.alert_id, "seen; will be looked at")
     for vehicle in fleet:
         if vehicle.story.takes_evaluation_after_days is not None:
-            _adopt_evaluation(services, vehicle, timedelta(days=vehicle.story.takes_evaluation_after_days))
+            _adopt_evaluation(services, vehicle, memory, timedelta(days=vehicle.story.takes_evaluation_after_days))
 
 
-def _adopt_evaluation(services: Services, vehicle: Vehicle, after: timedelta) -> None:
+def _adopt_evaluation(services: Services, vehicle: Vehicle, memory: Memory, after: timedelta) -> None:
     with services.read() as c:
         waiting = calibrations.open_proposals(c, vehicle.vehicle_id, "evaluation")
     for proposed in waiting:
         if services.now() - proposed.recorded_at >= after:
             reason = "worn tyres: what the evaluation found from the runs since the last baseline"
             adoption.adopt(services, person(APPROVER), proposed.calibration_id, reason, number=proposed.number)
+            memory.to_start.add(vehicle.vehicle_id)

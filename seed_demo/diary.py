@@ -10,7 +10,7 @@ from functools import partial
 from registry.services import Services
 from seed_demo import deeds
 from seed_demo.deeds import Memory
-from seed_demo.drives import DrivenRun, RunPlan, arrival_day, last_run_day, session_days, sister_of
+from seed_demo.drives import DrivenRun, RunPlan, arrival_day, is_measuring_day, last_run_day, session_days, sister_of
 from seed_demo.fleet import Vehicle
 
 Act = Callable[[Services], None]
@@ -18,7 +18,9 @@ Act = Callable[[Services], None]
 #: Seconds of a day.
 _REGISTERED, _STARTED_UP, _WORKED = 6 * 3600, 6 * 3600 + 1800, 7 * 3600 + 900
 _DESK, _DECIDED, _PASSED = 7 * 3600 + 2700, 15 * 3600, 20 * 3600
-_BOOT_EVERY_DAYS = 3
+#: A pass every other day and a start every other week keep the building short; they change nothing in what is found.
+_PASS_EVERY_DAYS = 2
+_START_EVERY_DAYS = 14
 
 
 @dataclass(frozen=True)
@@ -56,11 +58,12 @@ def entries(
     found: list[tuple[datetime, Act]] = [
         (calendar.at(plan.day, plan.second_of_day), partial(_hand_in, plan, take, memory)) for plan in planned
     ]
-    for place, vehicle in enumerate(fleet):
-        found.extend(_of_vehicle(fleet, place, vehicle, calendar, memory))
+    for vehicle in fleet:
+        found.extend(_of_vehicle(fleet, vehicle, calendar, memory))
     for day in range(calendar.days + 1):
-        found.append((calendar.at(day, _DESK), partial(deeds.morning_desk, fleet=fleet)))
-        found.append((calendar.at(day, _PASSED), deeds.evening_pass))
+        found.append((calendar.at(day, _DESK), partial(deeds.morning_desk, fleet=fleet, memory=memory)))
+        if day % _PASS_EVERY_DAYS == 0:
+            found.append((calendar.at(day, _PASSED), deeds.evening_pass))
     ordered = sorted(enumerate(found), key=lambda item: (item[1][0], item[0]))
     return [Entry(at, order, act) for order, (at, act) in ordered]
 
@@ -70,15 +73,15 @@ def _hand_in(plan: RunPlan, take: Callable[[RunPlan], DrivenRun], memory: Memory
 
 
 def _of_vehicle(
-    fleet: tuple[Vehicle, ...], place: int, vehicle: Vehicle, calendar: Calendar, memory: Memory
+    fleet: tuple[Vehicle, ...], vehicle: Vehicle, calendar: Calendar, memory: Memory
 ) -> Iterator[tuple[datetime, Act]]:
     """Registration, starts, work, baselines and what the story asks for beside."""
     story = vehicle.story
-    first = arrival_day(vehicle, calendar.days, place)
-    sessions = session_days(vehicle, calendar.days, place)
+    first = arrival_day(vehicle, calendar.days)
+    sessions = session_days(vehicle, calendar.days)
     borrowed = None if sessions else sister_of(vehicle, fleet)
     yield calendar.at(first, _REGISTERED), partial(deeds.register, vehicle=vehicle, borrowed_from=borrowed)
-    yield from _starts(place, vehicle, calendar, sessions, memory)
+    yield from _starts(vehicle, calendar, memory)
     for done in story.works:
         yield calendar.at(calendar.day_of(done.share), _WORKED), partial(deeds.work, vehicle=vehicle, done=done)
     for day in sessions:
@@ -93,25 +96,23 @@ def _of_vehicle(
         yield noticed, partial(deeds.set_aside_last, vehicle=vehicle, memory=memory)
 
 
-def _starts(
-    place: int, vehicle: Vehicle, calendar: Calendar, sessions: list[int], memory: Memory
-) -> Iterator[tuple[datetime, Act]]:
-    """Starts on every third day while the vehicle works, and on the morning after a baseline."""
+def _starts(vehicle: Vehicle, calendar: Calendar, memory: Memory) -> Iterator[tuple[datetime, Act]]:
+    """Starts on the vehicle's first day, and on every other of its measuring days while it works."""
     story = vehicle.story
-    first = arrival_day(vehicle, calendar.days, place)
+    first = arrival_day(vehicle, calendar.days)
     last = last_run_day(vehicle, calendar.days)
     deaf_from = calendar.days + 1 if story.deaf_from is None else calendar.day_of(story.deaf_from)
     for day in range(first, last + 1):
-        if day == first or (day + place) % _BOOT_EVERY_DAYS == 0 or day - 1 in sessions:
+        if day == first or (is_measuring_day(vehicle, day) and day % _START_EVERY_DAYS < 7):
             act = partial(deeds.start_up, vehicle=vehicle, memory=memory, deaf=day >= deaf_from)
-            yield calendar.at(day, _STARTED_UP + 60 * place), act
+            yield calendar.at(day, _STARTED_UP + 60 * vehicle.place), act
 
 
 def _decide(vehicle: Vehicle, day: int, first: bool, memory: Memory, services: Services) -> None:
     """Fit the runs of the session: all there are after new parts, only the day's own when nothing was exchanged."""
     if first or vehicle.story.works:
         reason = "first baseline" if first else "new baseline after the work"
-        deeds.set_new_baseline(services, vehicle, None, reason)
+        deeds.set_new_baseline(services, vehicle, memory, None, reason)
         return
     run_ids = tuple(memory.session_runs[f"{vehicle.vehicle_id}/{day}"])
-    deeds.set_new_baseline(services, vehicle, run_ids, "calibrated anew at half-worn tyres")
+    deeds.set_new_baseline(services, vehicle, memory, run_ids, "calibrated anew at half-worn tyres")

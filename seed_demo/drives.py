@@ -71,14 +71,14 @@ def sister_of(vehicle: Vehicle, fleet: tuple[Vehicle, ...]) -> Vehicle | None:
     return next((other for other in fleet if other.make == vehicle.make and other is not vehicle), None)
 
 
-def session_days(vehicle: Vehicle, days: int, place: int) -> list[int]:
+def session_days(vehicle: Vehicle, days: int) -> list[int]:
     """Days of the twelve calibration runs. First sessions are spread, three vehicles a day."""
-    return [place // 3 if share == 0.0 else round(share * days) for share in vehicle.story.sessions]
+    return [vehicle.place // 3 if share == 0.0 else round(share * days) for share in vehicle.story.sessions]
 
 
-def arrival_day(vehicle: Vehicle, days: int, place: int) -> int:
+def arrival_day(vehicle: Vehicle, days: int) -> int:
     """Day on which the vehicle is registered."""
-    return place // 3 if vehicle.story.arrives == 0.0 else round(vehicle.story.arrives * days)
+    return vehicle.place // 3 if vehicle.story.arrives == 0.0 else round(vehicle.story.arrives * days)
 
 
 def last_run_day(vehicle: Vehicle, days: int) -> int:
@@ -86,17 +86,22 @@ def last_run_day(vehicle: Vehicle, days: int) -> int:
     return days if vehicle.story.last_run >= 1.0 else min(round(vehicle.story.last_run * days), days - 38)
 
 
-def plans(vehicle: Vehicle, days: int, place: int) -> Iterator[RunPlan]:
-    """All runs of one vehicle in order of time: its calibration sessions, and three runs a week on two days."""
+def is_measuring_day(vehicle: Vehicle, day: int) -> bool:
+    """Each vehicle has its day of the week on the slab."""
+    return (day + 2 * vehicle.place) % 7 == 0
+
+
+def plans(vehicle: Vehicle, days: int) -> Iterator[RunPlan]:
+    """All runs of one vehicle in order of time: its calibration sessions, and three runs on a day of each week."""
     rng = np.random.default_rng([vehicle.seed, 1])
-    sessions = session_days(vehicle, days, place)
-    first = arrival_day(vehicle, days, place)
+    sessions = session_days(vehicle, days)
+    first = arrival_day(vehicle, days)
     last = last_run_day(vehicle, days)
     for day in range(first, days + 1):
         if day in sessions:
             yield from _session(vehicle, day, days, rng)
         elif first < day <= last:
-            yield from _ordinary(vehicle, day, days, place, rng)
+            yield from _ordinary(vehicle, day, days, rng)
 
 
 def _session(vehicle: Vehicle, day: int, days: int, rng: np.random.Generator) -> Iterator[RunPlan]:
@@ -115,10 +120,10 @@ def _session(vehicle: Vehicle, day: int, days: int, rng: np.random.Generator) ->
         yield _plan(vehicle, day, days, second, course, reading, driver, number)
 
 
-def _ordinary(vehicle: Vehicle, day: int, days: int, place: int, rng: np.random.Generator) -> Iterator[RunPlan]:
-    weekday = (day + 2 * place) % 7
-    count = {0: 2, 3: 1}.get(weekday, 0)
-    for number in range(count):
+def _ordinary(vehicle: Vehicle, day: int, days: int, rng: np.random.Generator) -> Iterator[RunPlan]:
+    if not is_measuring_day(vehicle, day):
+        return
+    for number in range(3):
         course, reading = _pick(vehicle, day + number, rng)
         driver = str(rng.choice(_DRIVERS))
         second = 8 * 3600 + 7200 * number + int(rng.integers(0, 5400))

@@ -112,6 +112,9 @@ class Story:
 
 @dataclass(frozen=True)
 class Vehicle:
+    """One machine. ``place`` is its row in the whole register, and sets its days on the slab in any part of it."""
+
+    place: int
     vehicle_id: str
     name: str
     serial: str

@@ -244,6 +244,7 @@ def vehicles() -> tuple[Vehicle, ...]:
     for index, (bird, make, story) in enumerate(_STORIES):
         found.append(
             Vehicle(
+                place=index,
                 vehicle_id=bird.lower(),
                 name=f"{bird}, {make.word}",
                 serial=f"TSG-{100 * (1 + _MAKES.index(make)) + index + 1}",

@@ -28,7 +28,7 @@ FLEET = {vehicle.vehicle_id: vehicle for vehicle in vehicles()}
 
 
 def _plans(vehicle: Vehicle, days: int = 180) -> list[RunPlan]:
-    return with_mishaps(list(plans(vehicle, days, list(FLEET.values()).index(vehicle))))
+    return with_mishaps(list(plans(vehicle, days)))
 
 
 def test_the_fleet_has_twelve_to_twenty_vehicles_on_tracks_and_on_wheels_each_with_its_own_tale() -> None:
@@ -42,7 +42,7 @@ def test_the_fleet_has_twelve_to_twenty_vehicles_on_tracks_and_on_wheels_each_wi
 def test_a_working_vehicle_drives_three_runs_a_week_beside_its_calibration_sessions() -> None:
     vehicle = FLEET["avocet"]
     planned = _plans(vehicle)
-    sessions = session_days(vehicle, 180, 0)
+    sessions = session_days(vehicle, 180)
     assert Counter(plan.day in sessions for plan in planned)[True] == 12
     ordinary = [plan for plan in planned if plan.day not in sessions]
     assert len(ordinary) == pytest.approx(180 / 7 * 3, abs=3)
