@@ -91,6 +91,8 @@ class Watched:
         expect(self.page.locator("[data-drawn] canvas")).to_have_count(count)
 
     def is_quiet(self) -> None:
+        # What the page still loads may speak too; and a server whose browser leaves in mid-answer drops an open file.
+        self.page.wait_for_load_state("networkidle")
         assert self.console == []
         assert self.outside == []
 
