@@ -75,7 +75,8 @@ def take_run(services: Services, actor: Actor, vehicle_id: str, statement: RunSt
         known = _known(c, vehicle_id, statement)
         if known is not None:
             return known, False
-        in_force = _parameters_at(c, vehicle_id, statement.started_at)
+        # A run from before anything was in force is told how it closes by what is in force now.
+        in_force = _parameters_at(c, vehicle_id, statement.started_at) or _parameters_at(c, vehicle_id, now)
         centre = _centre(c, version, now)
     check_range(statement, version.statement.counter_bits)
     worked = _work(statement, version, in_force, centre)
