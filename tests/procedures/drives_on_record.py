@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import shutil
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
+from contextlib import AbstractContextManager
 from dataclasses import dataclass, field, replace
 from datetime import datetime, timedelta
 from itertools import cycle
@@ -22,6 +23,7 @@ from registry.procedures.baseline import propose_baseline
 from registry.procedures.intake import RunStatement, content_digest, take_run
 from registry.procedures.registration import put_vehicle
 from registry.services import Services
+from registry.storage.engine import Connection
 from tests.conftest import BEGINNING, StandingClock, services_in
 from tests.numerics.drives import Leg, Truth, calibration_session, drive, eight, half_loop, is_spin, straight, traverse
 
@@ -195,21 +197,49 @@ def registered(services: Services, clock: StandingClock, vehicle_id: str = VEHIC
 class _NamedIds:
     """Identities unlike those that the tests' own services count."""
 
+    word: str
     number: int = 0
 
     def __call__(self) -> str:
         self.number += 1
-        return f"made{self.number:020d}"
+        return f"{self.word}{self.number:020d}"
 
 
-def calibrated_database(migrated_file: Path, folder: Path) -> Path:
-    """A database in which a vehicle has a baseline in force since a day before every test begins."""
+def driven_database(migrated_file: Path, folder: Path) -> Path:
+    """A database in which a vehicle has driven its calibration runs two days before every test begins."""
     shutil.copy(migrated_file, folder / "rollbook.db")
     clock = StandingClock(BEGINNING - timedelta(days=2))
-    services = replace(services_in(folder, clock), new_id=_NamedIds())
-    vehicle = registered(services, clock)
-    vehicle.session()
-    clock.time = BEGINNING - timedelta(days=1)
+    services = replace(services_in(folder, clock), new_id=_NamedIds("made"))
+    registered(services, clock).session()
+    upkeep.backup(services, folder / "driven.db")
+    return folder / "driven.db"
+
+
+def calibrated_database(driven_file: Path, folder: Path) -> Path:
+    """The same with a baseline of those runs in force since a day before every test begins."""
+    shutil.copy(driven_file, folder / "rollbook.db")
+    clock = StandingClock(BEGINNING - timedelta(days=1))
+    services = replace(services_in(folder, clock), new_id=_NamedIds("next"))
+    vehicle = DrivenVehicle(services, clock)
     vehicle.put_in_force(vehicle.baseline())
     upkeep.backup(services, folder / "calibrated.db")
     return folder / "calibrated.db"
+
+
+def meanwhile(services: Services, happens: Callable[[], object]) -> Services:
+    """The same services, on which something happens between the reading of a procedure and its writing."""
+    pending = [happens]
+
+    def write() -> AbstractContextManager[Connection]:
+        while pending:
+            pending.pop()()
+        return services.write()
+
+    return replace(services, write=write)
+
+
+def on_a_copy(file: Path, folder: Path, clock: StandingClock, **chosen: object) -> DrivenVehicle:
+    """The vehicle of a database made before, on a copy of its own, with its runs numbered on."""
+    folder.mkdir()
+    shutil.copy(file, folder / "rollbook.db")
+    return DrivenVehicle(services_in(folder, clock, **chosen), clock, number=12)
