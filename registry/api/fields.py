@@ -24,6 +24,8 @@ from registry.errors import TooLarge
 DOOR_DIGITS = 12
 #: Whole numbers up to here are exact as floating point.
 _EXACT = 2**53
+#: Thirty thousand years: beyond it a number is no time in seconds.
+_LARGEST_TIME_S = 1e12
 _INT64_MAX = 2**63 - 1
 
 #: Control characters that no text needs (tab, line feed and carriage return are kept for notes), and halves of pairs.
@@ -145,10 +147,12 @@ def read_times(value: object) -> NDArray[np.float64]:
     try:
         times_s = np.array(values, dtype=np.float64)
     except OverflowError:
-        index = next(i for i, number in enumerate(values) if abs(number) > _EXACT)
-        raise _refuse_sample(index, "is too large to be a time in seconds") from None
-    if not np.isfinite(times_s).all():
-        raise _refuse_sample(int(np.flatnonzero(~np.isfinite(times_s))[0]), "must be finite")
+        times_s = np.array(
+            [number if abs(number) <= _LARGEST_TIME_S else math.inf for number in values], dtype=np.float64
+        )
+    outside = ~(np.abs(times_s) <= _LARGEST_TIME_S)
+    if outside.any():
+        raise _refuse_sample(int(np.argmax(outside)), "must be a finite time in seconds")
     return times_s
 
 

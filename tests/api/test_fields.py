@@ -113,6 +113,8 @@ def test_a_count_that_is_none_is_refused_with_its_sample(values, place):
         ([0, "1"], "/time_s/1"),
         ([0, 1, float("inf")], "/time_s/2"),
         ([0, 10**400], "/time_s/1"),
+        ([0, 2**63], "/time_s/1"),
+        ([0, -1e13, 10**400], "/time_s/1"),
         ([[0], [1]], "/time_s/0"),
         (5, "/time_s"),
     ],
