@@ -2,8 +2,7 @@
 
 The conformance probability of an estimate y with standard uncertainty u against the interval [lower, upper] is
 Phi((upper - y)/u) - Phi((lower - y)/u). What is called beyond stays so until that probability has clearly fallen: a
-dead
-band keeps the answer from chattering.
+dead band keeps the answer from chattering.
 """
 
 from __future__ import annotations
@@ -11,7 +10,7 @@ from __future__ import annotations
 import math
 from typing import Literal
 
-from scipy.special import ndtr, stdtr
+from scipy.special import ndtr, stdtr, stdtrit
 
 Decision = Literal["within", "uncertain", "beyond"]
 
@@ -45,6 +44,19 @@ def probability_beyond(value: float, u: float, lower: float, upper: float, degre
     below = 0.0 if math.isinf(lower) else _lower_tail((lower - value) / u, degrees)
     above = 0.0 if math.isinf(upper) else _lower_tail((value - upper) / u, degrees)
     return min(1.0, below + above)
+
+
+def coverage_factor(degrees: float, probability: float = 0.95) -> float:
+    """Student's factor that turns a standard uncertainty into the half width of a two-sided interval (GUM annex G).
+
+    Parameters
+    ----------
+    degrees : float
+        Degrees of freedom; taken as one where there are fewer.
+    probability : float
+        That the interval covers.
+    """
+    return float(stdtrit(max(1.0, degrees), 0.5 * (1.0 + probability)))
 
 
 def _lower_tail(score: float, degrees: float) -> float:

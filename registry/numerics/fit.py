@@ -28,28 +28,25 @@ from dataclasses import dataclass
 from typing import Literal
 
 import numpy as np
-from scipy.special import stdtrit
 
 from registry.numerics.arrays import Bool, Float
 from registry.numerics.closure import Closures, misclosure
-from registry.numerics.least_squares import Solution, gauss_newton, solve
-from registry.numerics.linearised import Stack, linearise, normal_score, robust_weight, whitener
+from registry.numerics.conformity import coverage_factor
+from registry.numerics.least_squares import gauss_newton, solve
+from registry.numerics.linearised import linearise, normal_score, whitener
+from registry.numerics.misclosures import WEAK_SD, Misclosures, OutsideMapsError
 from registry.numerics.observability import relative_from_quantities, to_parameters, to_quantities
+from registry.numerics.stacks import Stack
 from registry.numerics.variance_parts import ROLLING_PRIOR_SD, VarianceParts, Whitened
 
 METHOD_VERSION = "1"
 
 #: Rolling noise before any run has told: half a millimetre per square root of a metre, squared.
 DEFAULT_ROLLING_NOISE_M = 2.5e-7
-#: A direction the runs leave free is kept at the start value with these standard deviations; a third of any tolerance
-#: is far below.
-_WEAK_SD = np.array([1.0, 0.3, 1.0])
 _STEP_LIMIT = 0.2
 _ITERATIONS = 60
-#: Steps with bounded influence before far runs lose theirs altogether: a poor start must not choose its outliers.
-_BOUNDED_FIRST = 5
-#: Settled: a step of a two-hundredth of the standard uncertainty, and the noise variance known to 1 %.
-_SETTLED_STEP, _SETTLED_NOISE = 5e-3, 1e-2
+#: Settled: a step of a two-hundredth of the standard uncertainty.
+_SETTLED_STEP = 5e-3
 
 Status = Literal["converged", "not converged", "outside maps"]
 
@@ -149,105 +146,29 @@ def fit(
     start_quantities = to_quantities(start)
     if hold is not None:
         start_quantities = np.where(hold.which, hold.quantities, start_quantities)
-    model = _Misclosures(stack, closures, start_quantities, hold, rolling_guess_m)
+    free = np.ones(3, dtype=np.bool_) if hold is None else ~hold.which
+    model = Misclosures(stack, closures, start_quantities, free, rolling_guess_m)
     if not bool(np.all(stack.inside(to_parameters(start_quantities)))):
-        return _summarise(model, "outside maps")
+        return _summarise(model, hold, "outside maps")
     try:
         end = gauss_newton(model, model.at, _SETTLED_STEP, _STEP_LIMIT, _ITERATIONS)
-    except _OutsideMapsError:
-        return _summarise(model, "outside maps")
-    return _summarise(model, "converged" if end.converged else "not converged")
+    except OutsideMapsError:
+        return _summarise(model, hold, "outside maps")
+    return _summarise(model, hold, "converged" if end.converged else "not converged")
 
 
-class _OutsideMapsError(Exception):
-    """A step led out of the box of a map."""
-
-
-class _Misclosures:
-    """The runs as the least-squares machinery sees them: whitened, weighed, and held weakly at the start."""
-
-    def __init__(self, stack: Stack, closures: Closures, start: Float, hold: Hold | None, guess: float) -> None:
-        self.stack = stack
-        self.closures = closures
-        self.start = start
-        self.hold = hold
-        self.free = np.ones(3, dtype=np.bool_) if hold is None else ~hold.which
-        self.parts = VarianceParts(guess, rolling=4.0 * guess)
-        self.rounds = 0
-        self.at = start[self.free]
-        self.runs = linearise(stack, closures, start)
-        self.whitener, self.weight = self._weigh(bounded=True)
-
-    @property
-    def quantities(self) -> Float:
-        """All three where the runs are linearised."""
-        return self._all(self.at)
-
-    def _all(self, at: Float) -> Float:
-        quantities = self.start.copy()
-        quantities[self.free] = at
-        return quantities
-
-    def _move(self, at: Float) -> None:
-        """Linearise again, only where the point has moved."""
-        if np.array_equal(at, self.at):
-            return
-        quantities = self._all(at)
-        if not bool(np.all(self.stack.inside(to_parameters(quantities)))):
-            raise _OutsideMapsError
-        self.runs, self.at = linearise(self.stack, self.closures, quantities), at.copy()
-
-    def _weigh(self, bounded: bool) -> tuple[Float, Float]:
-        """Whiteners (n, 4, 4) and weights (n,) where the runs are linearised."""
-        whiteners = self.runs.whitener(self.parts.rolling, self.parts.spread)
-        distance = (np.einsum("nij,nj->ni", whiteners, self.runs.e) ** 2).sum(axis=1)
-        return whiteners, robust_weight(distance, self.runs.count, bounded)
-
-    def residual(self, at: Float) -> Float:
-        """Whitened, weighed misclosures, and how far the start is away."""
-        self._move(at)
-        white = np.einsum("nij,nj->ni", self.whitener, self.runs.e) * np.sqrt(self.weight)[:, None]
-        return np.concatenate([white.ravel(), ((self.start - self.quantities) / _WEAK_SD)[self.free]])
-
-    def jacobian(self, at: Float) -> Float:
-        """Of the free quantities."""
-        self._move(at)
-        used = np.concatenate([np.ones(4 * self.weight.size, dtype=np.bool_), self.free])
-        return np.asarray(self.rows()[used][:, self.free])
-
-    def rows(self) -> Float:
-        """Whitened, weighed derivatives of all three quantities, and the weak hold of each: (4 n + 3, 3)."""
-        white = (self.whitener @ self.runs.j) * np.sqrt(self.weight)[:, None, None]
-        return np.concatenate([white.reshape(-1, 3), np.diag(1.0 / _WEAK_SD)])
-
-    def settle(self, at: Float, solution: Solution, still: bool) -> bool:
-        """Move the variances by one step, and the weights with them."""
-        self._move(at)
-        self.rounds += 1
-        seen = Whitened(self.runs, self.whitener, self.weight, self.root(solution))
-        moved = self.parts.step(seen)
-        stand = still and moved < _SETTLED_NOISE and self.rounds > _BOUNDED_FIRST
-        stand = stand and not self.parts.take_up_spread(seen)
-        self.whitener, self.weight = self._weigh(bounded=self.rounds < _BOUNDED_FIRST)
-        return stand
-
-    def root(self, solution: Solution) -> Float:
-        """Root (3, p) of the covariance of all three quantities, those held without any."""
-        root = np.zeros((3, solution.root.shape[1]))
-        root[self.free] = solution.root
-        return root
-
-
-def _summarise(model: _Misclosures, status: Status) -> Fit:
-    model.whitener, model.weight = model._weigh(bounded=False)
+def _summarise(model: Misclosures, hold: Hold | None, status: Status) -> Fit:
+    model.weigh(bounded=False)
     rows, weight, runs = model.rows(), model.weight, model.runs
-    white = np.einsum("nij,nj->ni", model.whitener, runs.e)
+    white = model.white()
     distance = (white**2).sum(axis=1)
     solution = solve(model.jacobian(model.at), model.residual(model.at))
     weighted = float(weight @ distance)
-    degrees = float(weight @ runs.count) - float(model.free.sum())
-    birge = float(np.sqrt(weighted / degrees)) if degrees >= 1.0 else None
     root = model.root(solution)
+    # What only the weak hold keeps in place takes no degree of freedom from the runs.
+    determined = float(model.free.sum()) - float(((root / WEAK_SD[:, None]) ** 2).sum())
+    degrees = float(weight @ runs.count) - determined
+    birge = float(np.sqrt(weighted / degrees)) if degrees >= 1.0 else None
     effective = min(degrees, _satterthwaite_degrees(Whitened(runs, model.whitener, weight, root), model.parts))
     log_determinants = 2.0 * float(np.log(np.einsum("nii->ni", model.whitener)).sum()) + float(
         runs.count @ np.log(weight)
@@ -256,11 +177,11 @@ def _summarise(model: _Misclosures, status: Status) -> Fit:
     return Fit(
         status=status,
         parameters=to_parameters(model.quantities),
-        covariance=_covariance(rows, root, max(1.0, birge**2) if birge is not None else 1.0, model.hold),
+        covariance=_covariance(rows, root, max(1.0, birge**2) if birge is not None else 1.0, hold),
         rolling_noise_m=model.parts.rolling,
         spread=float(np.sqrt(model.parts.spread)),
         birge_ratio=birge,
-        coverage_factor=float(stdtrit(max(1.0, effective), 0.975)),
+        coverage_factor=coverage_factor(effective),
         degrees_of_freedom=effective,
         weight=weight,
         residual=runs.e,

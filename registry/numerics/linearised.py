@@ -8,29 +8,18 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import cached_property
-from typing import Protocol
 
 import numpy as np
 
-from registry.numerics.arrays import Bool, Float
+from registry.numerics.arrays import Float
 from registry.numerics.closure import Closures, component_jacobian, misclosure
-from registry.numerics.closure_map import Prediction
 from registry.numerics.observability import relative_from_quantities, to_parameters
+from registry.numerics.stacks import Stack
 
 #: Run-to-run spread of (tick factor, side ratio, width), in proportion to the usual tolerances.
 SPREAD_SHAPE = np.diag([1.0, 0.09, 9.0])
 #: Normal score of a run's distance beyond which its influence is bounded.
 _BOUND_SCORE = 2.0
-
-
-class Stack(Protocol):
-    """Runs that can be predicted together: closure maps, or counts."""
-
-    def predict(self, parameters: Float) -> Prediction:
-        """End poses, Jacobians and noise covariances at parameters (3,)."""
-
-    def inside(self, parameters: Float) -> Bool:
-        """For each run, whether the prediction is good there."""
 
 
 @dataclass(frozen=True)

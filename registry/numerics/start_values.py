@@ -17,8 +17,8 @@ import numpy as np
 
 from registry.numerics.arrays import Float
 from registry.numerics.closure import DISTANCE, HEADING, Closures, misclosure
-from registry.numerics.closure_map import CountsStack
 from registry.numerics.fit import fit
+from registry.numerics.stacks import CountsStack
 
 _WIDTH_RANGE = (0.5, 2.2)
 _STRAIGHT_RAD = 0.6

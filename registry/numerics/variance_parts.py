@@ -15,7 +15,7 @@ References
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 
@@ -61,6 +61,7 @@ class VarianceParts:
     guess: float
     rolling: float
     spread: float = 0.0
+    _last: Float = field(default_factory=lambda: np.zeros(2))
 
     def step(self, at: Whitened) -> float:
         """One scoring step on ln q (held loosely at its guess) and, where in use, on ln of the spread; answers how far
@@ -75,6 +76,10 @@ class VarianceParts:
         if len(parts) == 2:
             curvature[1, 1] += 1e-3
         step = np.clip(np.linalg.solve(curvature, gradient), -1.0, 1.0)
+        # A step that takes the last one back has gone too far: halving ends a swing between two values.
+        last = self._last[: len(parts)]
+        step = np.where(step * last < 0.0, np.clip(step, -0.5 * np.abs(last), 0.5 * np.abs(last)), step)
+        self._last[: len(parts)] = step
         self.rolling = float(self.rolling * np.exp(step[0]))
         if len(parts) == 2:
             self.spread = float(self.spread * np.exp(step[1]))

@@ -16,9 +16,9 @@ from registry.domain.tolerance import QUANTITIES, QUANTITY_WORDS
 from registry.domain.vehicle import Parameters, VehicleVersion
 from registry.errors import Conflict, FieldError, Invalid, NotObserved
 from registry.numerics.arrays import Bool
-from registry.numerics.closure_map import CountsStack, MapStack
 from registry.numerics.fit import METHOD_VERSION, Fit, fit, misclosures
 from registry.numerics.observability import observed
+from registry.numerics.stacks import CountsStack, MapStack
 from registry.numerics.start_values import find_start
 from registry.procedures import authority
 from registry.procedures.calibration_results import (

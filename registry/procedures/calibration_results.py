@@ -10,9 +10,9 @@ import numpy as np
 from registry.domain.calibration import Calibration, CalibrationResult, CalibrationRun, Kind, Matrix3, Observed
 from registry.domain.run import Run
 from registry.numerics.arrays import Bool, Float
-from registry.numerics.closure_map import CountsStack, MapStack
 from registry.numerics.fit import METHOD_VERSION, Fit, Hold, fit
 from registry.numerics.observability import quantity_covariance, to_quantities
+from registry.numerics.stacks import CountsStack, MapStack
 from registry.procedures.boot_sheets import awaiting
 from registry.procedures.evidence import Evidence, misclosure_of, parameter_array, parameters_of
 from registry.storage import calibrations as calibration_store

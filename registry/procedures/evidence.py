@@ -13,7 +13,8 @@ from registry.errors import NotFound
 from registry.numerics import closure_map, counters
 from registry.numerics.arrays import Float
 from registry.numerics.closure import Closures
-from registry.numerics.closure_map import ClosureMap, CountsStack, MapStack
+from registry.numerics.closure_map import ClosureMap
+from registry.numerics.stacks import CountsStack, MapStack
 from registry.storage import runs as run_store
 from registry.storage import vehicles as vehicle_store
 from registry.storage.counts_blob import Counts

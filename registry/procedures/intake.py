@@ -14,7 +14,7 @@ from registry.errors import Conflict, FieldError, Invalid
 from registry.numerics import closure_map, counters
 from registry.numerics.arrays import Float
 from registry.numerics.closure import HEADING, misclosure
-from registry.numerics.closure_map import CountsStack
+from registry.numerics.stacks import CountsStack
 from registry.procedures import authority
 from registry.procedures.evidence import closures_of, levers_of, misclosure_of, parameter_array
 from registry.procedures.run_checks import (

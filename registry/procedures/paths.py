@@ -11,9 +11,9 @@ from registry.domain.run import Misclosure, Run
 from registry.domain.vehicle import Parameters
 from registry.numerics.arrays import Float
 from registry.numerics.closure import component_jacobian, misclosure, misclosure_covariance
-from registry.numerics.closure_map import CountsStack
 from registry.numerics.fit import DEFAULT_ROLLING_NOISE_M
 from registry.numerics.kinematics import at_reference_point, path
+from registry.numerics.stacks import CountsStack
 from registry.procedures.calibration_results import current_calibration
 from registry.procedures.evidence import Evidence, misclosure_of, parameter_array
 from registry.services import Services

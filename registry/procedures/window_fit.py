@@ -13,7 +13,7 @@ from registry.domain.evaluation import EvaluationResult, QuantityFinding
 from registry.domain.run import Run
 from registry.domain.vehicle import VehicleVersion
 from registry.numerics.arrays import Bool, Float
-from registry.numerics.closure_map import ClosureMap, CountsStack, MapStack
+from registry.numerics.closure_map import ClosureMap
 from registry.numerics.conformity import ACT_AT, WATCH_AT, probability_beyond
 from registry.numerics.fit import DEFAULT_ROLLING_NOISE_M, Fit, fit, misclosures, scores_against
 from registry.numerics.observability import (
@@ -25,6 +25,7 @@ from registry.numerics.observability import (
     to_quantities,
 )
 from registry.numerics.recent import last_break
+from registry.numerics.stacks import CountsStack, MapStack
 from registry.numerics.start_values import find_start
 from registry.procedures.calibration_results import (
     calibration_result,

@@ -12,9 +12,10 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from registry.numerics import closure_map
-from registry.numerics.closure_map import CountsStack, MapStack, decode, encode, fold
+from registry.numerics.closure_map import decode, encode, fold
 from registry.numerics.kinematics import end_pose
 from registry.numerics.rolling_noise import noise_covariance
+from registry.numerics.stacks import CountsStack, MapStack
 
 from .drives import Float, Truth, drive, eight, half_loop, round_square, spin, straight, traverse
 

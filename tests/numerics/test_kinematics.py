@@ -8,8 +8,8 @@ from hypothesis import given
 from hypothesis import strategies as st
 from hypothesis.extra import numpy as arrays
 
-from registry.numerics.closure_map import Prediction, at_levers
 from registry.numerics.kinematics import at_reference_point, end_pose, lever_jacobian, path, sinc_and_slope
+from registry.numerics.stacks import Prediction, at_levers
 
 from .drives import Float, Truth, drive, eight, half_loop, round_square, spin, traverse
 
