@@ -7,6 +7,7 @@ from dataclasses import dataclass
 from typing import Literal, get_args
 
 from registry.domain.alert import ActWithin, Alert
+from registry.domain.boot import Condition
 from registry.domain.calibration import Calibration
 from registry.domain.maintenance import MAINTENANCE_WORDS, Maintenance
 
@@ -47,7 +48,7 @@ def _of_proposal(proposal: Calibration) -> NextStep:
 def next_step(
     alerts: Sequence[Alert],
     proposals: Sequence[Calibration],
-    anything_in_force: bool,
+    condition: Condition | None,
     awaiting: Maintenance | None,
 ) -> NextStep:
     """The most urgent of what is open for one vehicle.
@@ -58,16 +59,16 @@ def next_step(
         The vehicle's open alerts; shelved ones ask for nothing.
     proposals
         Its calibrations that are proposed and not yet decided.
-    anything_in_force
-        Whether it has parameters to drive on.
+    condition
+        Of the parameters it is to drive on; None when nothing is in force.
     awaiting
         Maintenance that ended the window and after which no new calibration came into force.
     """
     steps: list[NextStep] = []
-    if not anything_in_force and not proposals:
+    if condition is None and not proposals:
         sentence = "Enter provisional values, so that it can drive its calibration runs."
         steps.append(NextStep("before it drives", sentence, "Nothing is in force.", "provisional"))
-    elif not anything_in_force:
+    elif condition is None:
         sentence = f"Decide on calibration {proposals[0].number}: it has nothing to drive on until one is in force."
         steps.append(
             NextStep("before it drives", sentence, "Nothing is in force.", "proposal", proposals[0].calibration_id)
@@ -78,7 +79,10 @@ def next_step(
         sentence = "Drive calibration runs and propose a new baseline."
         why = f"Its parameters may have moved with the work of {awaiting.done_at:%Y-%m-%d}: {work}."
         steps.append(NextStep("this shift", sentence, why, "baseline"))
-    if anything_in_force:
+    if condition == "provisional" and not proposals:
+        sentence = "Drive its calibration runs and propose a baseline."
+        steps.append(NextStep("this week", sentence, "It drives on provisional values.", "baseline"))
+    if condition is not None:
         steps.extend(_of_proposal(proposal) for proposal in proposals)
     if not steps:
         return NOTHING_TO_DO

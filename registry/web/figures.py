@@ -120,3 +120,9 @@ def who(actor: str) -> str:
     if kind == "vehicle" and name:
         return f"vehicle {name}"
     return {"schedule": "the schedule", "local": "the console"}.get(kind, actor)
+
+
+def without_name(message: str, name: str) -> str:
+    """A message about a vehicle as said where its name stands above already."""
+    told = message.removeprefix(f"{name}: ")
+    return told[:1].upper() + told[1:]

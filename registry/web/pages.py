@@ -17,7 +17,19 @@ from registry.web.policy import guarded
 _HERE = Path(__file__).parent
 
 #: What templates write figures with.
-FILTERS = ("stamp", "moment", "day", "percent", "degrees", "millimetres", "metres", "span", "decimals", "who")
+FILTERS = (
+    "stamp",
+    "moment",
+    "day",
+    "percent",
+    "degrees",
+    "millimetres",
+    "metres",
+    "span",
+    "decimals",
+    "who",
+    "without_name",
+)
 
 
 def register(app: Flask, services: Services) -> None:

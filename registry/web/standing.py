@@ -16,7 +16,7 @@ from registry.procedures import boot
 from registry.storage import alerts, boots, calibrations, evaluations, vehicles
 from registry.storage.engine import Connection
 from registry.storage.in_force import parameters_in_force
-from registry.web.figures import day
+from registry.web.figures import day, without_name
 from registry.web.strips import TRAIL_LENGTH, Gauge, Strip, make_strip
 
 #: Of a 95 % interval where an evaluation names none of its own.
@@ -36,6 +36,11 @@ class Standing:
     @property
     def vehicle_id(self) -> str:
         return self.version.vehicle_id
+
+    @property
+    def why(self) -> str:
+        """Why there is something to do; the page has named the vehicle already."""
+        return without_name(self.step.why, self.version.statement.name)
 
     @property
     def drives_on_words(self) -> str:
@@ -89,7 +94,7 @@ def of_fleet(c: Connection) -> list[Standing]:
         step = next_step(
             open_alerts.get(vehicle_id, ()),
             calibrations.open_proposals(c, vehicle_id),
-            held is not None,
+            None if held is None or sheet is None else sheet.condition,
             boot.awaiting(c, vehicle_id) if questioned else None,
         )
         width_m = parameters.get(vehicle_id, statement.nominal).width_m
@@ -105,7 +110,7 @@ def of_vehicle(c: Connection, version: VehicleVersion, now: datetime) -> Standin
     step = next_step(
         alerts.open_for(c, vehicle_id),
         calibrations.open_proposals(c, vehicle_id),
-        held is not None,
+        None if held is None or sheet is None else sheet.condition,
         boot.awaiting(c, vehicle_id),
     )
     width_m = statement.nominal.width_m

@@ -3,7 +3,7 @@
 The jaws stand at the tolerance, the line between them is the calibration in force, the mark is what the recent runs
 say, with its 95 % whisker, and the trail below it is what earlier evaluations said, the newest uppermost. The form of
 the mark says the state as well as its place does: a disc within, a lozenge where it is uncertain, an arrow-head
-pointing outwards beyond, and an empty gauge where these runs cannot tell.
+pointing outwards beyond (two where it lies beyond the view), and an empty gauge where these runs cannot tell.
 
 Everything here is geometry and words; the template writes them as SVG. Coordinates are those of a 240 by 48 view box.
 """
@@ -24,7 +24,7 @@ VIEW_HEIGHT = 48.0
 MIDDLE = VIEW_WIDTH / 2.0
 #: One tolerance in view box units: the view reaches half a tolerance beyond either jaw.
 REACH = 76.0
-EDGE = 5.0
+EDGE = 9.0
 ESTIMATE_Y = 13.0
 TRAIL_TOP = 22.0
 TRAIL_BOTTOM = 44.0
@@ -54,14 +54,16 @@ class Strip:
     state: State
     state_words: str
     words: str
-    share_words: str
     title: str
-    estimate_x: float | None
-    whisker: tuple[float, float] | None
-    cut_low: bool
-    cut_high: bool
-    outwards: int
     trail: tuple[tuple[float, float], ...]
+    share_words: str = ""
+    estimate_x: float | None = None
+    #: Held at the edge: the estimate itself lies beyond the view, and so does its whisker.
+    off_scale: bool = False
+    whisker: tuple[float, float] | None = None
+    cut_low: bool = False
+    cut_high: bool = False
+    outwards: int = 0
 
     @property
     def jaws(self) -> tuple[float, float]:
@@ -79,11 +81,16 @@ class Strip:
             return ""
         x, y = self.estimate_x, ESTIMATE_Y
         if self.state == "beyond":
-            tip, back = x + 6.5 * self.outwards, x - 4.5 * self.outwards
-            return f"M{tip:g} {y:g}L{back:g} {y - 7:g}L{back:g} {y + 7:g}Z"
+            behind = _arrow_head(x - 10.0 * self.outwards, y, self.outwards) if self.off_scale else ""
+            return behind + _arrow_head(x, y, self.outwards)
         if self.state == "uncertain":
             return f"M{x:g} {y - 7:g}L{x + 7:g} {y:g}L{x:g} {y + 7:g}L{x - 7:g} {y:g}Z"
         return f"M{x - 5:g} {y:g}a5 5 0 1 0 10 0a5 5 0 1 0 -10 0Z"
+
+
+def _arrow_head(x: float, y: float, outwards: int) -> str:
+    tip, back = x + 6.5 * outwards, x - 4.5 * outwards
+    return f"M{tip:g} {y:g}L{back:g} {y - 7:g}L{back:g} {y + 7:g}Z"
 
 
 def state_of(finding: QuantityFinding | None) -> State:
@@ -141,10 +148,9 @@ def make_strip(gauge: Gauge, finding: QuantityFinding | None, earlier: Sequence[
     trail = trail_of(earlier, gauge.tolerance)
     if finding is None or state == "cannot_tell" or finding.deviation is None or finding.u is None:
         words = STATE_WORDS[state]
-        return Strip(
-            gauge.quantity, label, state, words, words, "", f"{label}: {words}", None, None, False, False, 0, trail
-        )
+        return Strip(gauge.quantity, label, state, words, words, f"{label}: {words}", trail)
     expanded = gauge.coverage_factor * finding.u
+    estimate_x, off_scale = place(finding.deviation, gauge.tolerance)
     low_x, cut_low = place(finding.deviation - expanded, gauge.tolerance)
     high_x, cut_high = place(finding.deviation + expanded, gauge.tolerance)
     words = consequence(gauge.quantity, finding.deviation, gauge.width_m)
@@ -161,8 +167,9 @@ def make_strip(gauge: Gauge, finding: QuantityFinding | None, earlier: Sequence[
         words=words,
         share_words=share_words,
         title=title,
-        estimate_x=place(finding.deviation, gauge.tolerance)[0],
-        whisker=(low_x, high_x),
+        estimate_x=estimate_x,
+        off_scale=off_scale,
+        whisker=None if off_scale else (low_x, high_x),
         cut_low=cut_low,
         cut_high=cut_high,
         outwards=1 if finding.deviation > 0.0 else -1,

@@ -51,36 +51,45 @@ WORK = Maintenance("m1", "v1", AT, "part_fitted", "left", None, True, AT, "Ada")
 
 
 def test_a_quiet_vehicle_asks_for_nothing() -> None:
-    assert next_step((), (), True, None) == NOTHING_TO_DO
+    assert next_step((), (), "good", None) == NOTHING_TO_DO
 
 
 def test_a_vehicle_with_nothing_in_force_asks_for_provisional_values_before_it_drives() -> None:
-    step = next_step((), (), False, None)
+    step = next_step((), (), None, None)
     assert (step.act_within, step.leads_to) == ("before it drives", "provisional")
 
 
 def test_a_vehicle_with_only_a_proposal_asks_for_the_decision_before_it_drives() -> None:
-    step = next_step((ALERT,), (PROPOSAL,), False, None)
+    step = next_step((ALERT,), (PROPOSAL,), None, None)
     assert (step.act_within, step.leads_to, step.target_id) == ("before it drives", "proposal", "c4")
 
 
 def test_the_most_urgent_alert_speaks_before_a_proposal_and_the_advice_is_the_sentence() -> None:
-    step = next_step((ALERT,), (PROPOSAL,), True, None)
+    step = next_step((ALERT,), (PROPOSAL,), "good", None)
     assert (step.sentence, step.why, step.target_id) == ("Check the tracks.", "Effective width is beyond.", "a1")
 
 
 def test_an_alert_that_no_longer_holds_asks_only_for_acknowledgement() -> None:
-    step = next_step((replace(ALERT, standing="returned"),), (), True, None)
+    step = next_step((replace(ALERT, standing="returned"),), (), "good", None)
     assert step.act_within == "this week"
     assert step.sentence.startswith("Acknowledge")
 
 
 def test_a_shelved_alert_asks_for_nothing() -> None:
-    assert next_step((replace(ALERT, standing="shelved"),), (), True, None) == NOTHING_TO_DO
+    assert next_step((replace(ALERT, standing="shelved"),), (), "good", None) == NOTHING_TO_DO
 
 
 def test_maintenance_that_awaits_a_calibration_asks_for_runs_and_names_the_work() -> None:
-    step = next_step((), (PROPOSAL,), True, WORK)
+    step = next_step((), (PROPOSAL,), "questioned", WORK)
     assert step.leads_to == "baseline"
     assert "2031-05-04" in step.why
     assert "new track, tyre or wheel fitted" in step.why
+
+
+def test_provisional_values_ask_for_calibration_runs() -> None:
+    step = next_step((), (), "provisional", None)
+    assert (step.act_within, step.leads_to) == ("this week", "baseline")
+
+
+def test_provisional_values_with_a_proposal_ask_for_the_decision() -> None:
+    assert next_step((), (PROPOSAL,), "provisional", None).leads_to == "proposal"

@@ -59,3 +59,8 @@ def test_durations_are_written_in_the_unit_a_person_would_use() -> None:
 def test_who_did_it_is_said_in_words() -> None:
     told = [figures.who(text) for text in ("Tove", "schedule", "schedule:pass", "vehicle:tub-7", "local:console")]
     assert told == ["Tove", "the schedule", "the schedule", "vehicle tub-7", "the console"]
+
+
+def test_a_message_is_said_without_the_name_that_stands_above_it() -> None:
+    assert figures.without_name("Ore tub 7: no usable run", "Ore tub 7") == "No usable run"
+    assert figures.without_name("Booted on calibration 2", "Ore tub 7") == "Booted on calibration 2"

@@ -241,7 +241,7 @@ def test_acknowledging_needs_a_note(visitor: Visits, yard: Yard, services: Servi
 def test_alerts_are_grouped_by_the_time_to_act_within(visitor: Visits) -> None:
     text = flat(visitor("Rea").text("/alerts"))
     assert "1 alert: 1 this shift." in text
-    assert "Consequence: falls short 58 mm in 10 m." in text
+    assert "The tick factor is 0.58 % below the calibration in force. The vehicle falls short 58 mm in 10 m." in text
     assert visitor("Rea").get("/alerts?standing=some").status_code == 404
 
 

@@ -22,9 +22,15 @@ def test_no_deviation_stands_in_the_middle_and_one_tolerance_at_the_jaw() -> Non
 
 def test_what_is_far_out_is_held_at_the_edge_and_said_to_be_cut() -> None:
     assert place(1.0, 0.005) == (VIEW_WIDTH - EDGE, True)
+    cut = make_strip(TICK_FACTOR, found(0.006, 0.001, 0.9))
+    assert (cut.cut_low, cut.cut_high, cut.off_scale) == (False, True, False)
     strip = make_strip(TICK_FACTOR, found(-0.02, 0.0005, 1.0))
     assert strip.estimate_x == EDGE
-    assert (strip.cut_low, strip.cut_high) == (True, True)
+    assert strip.off_scale
+    assert strip.whisker is None
+    assert strip.mark.count("Z") == 2
+    assert "overshoots" not in strip.words
+    assert strip.words == "falls short 200 mm in 10 m"
 
 
 def test_the_whisker_is_the_95_percent_interval() -> None:

@@ -136,8 +136,8 @@ def furnish(services: Services, clock: StandingClock) -> Yard:
     content = AlertContent(
         "beyond_tolerance",
         "tick_factor",
-        "The tick factor is 0.58 % below the calibration in force.",
-        "falls short 58 mm in 10 m",
+        "Ore tub 7: the tick factor is 0.58 % below the calibration in force.",
+        "The vehicle falls short 58 mm in 10 m.",
         "Drive calibration runs and propose a new baseline.",
         "medium",
         "this shift",
