@@ -11,6 +11,7 @@ from typing import Any
 from flask import Response, send_from_directory
 from flask_openapi3.blueprint import APIBlueprint
 from flask_openapi3.models.info import Info
+from flask_openapi3.models.parameter import Parameter
 from flask_openapi3.models.tag import Tag
 from flask_openapi3.openapi import OpenAPI
 from flask_openapi3.types import ResponseDict
@@ -50,6 +51,15 @@ def resource(name: str) -> APIBlueprint:
 #: Answers beyond the common ones.
 CONFLICTS = refused(409)
 PRECONDITIONS = refused(412, 428)
+
+
+def _header(name: str, description: str) -> Parameter:
+    content = {"name": name, "in": "header", "description": description, "schema": {"type": "string"}}
+    return Parameter.model_validate(content)
+
+
+_IF_MATCH = _header("If-Match", "The `ETag` of the version that was seen; needed to change a known vehicle")
+_IF_NONE_MATCH = _header("If-None-Match", "The `ETag` of the answer that is kept")
 
 _DESCRIPTION = """\
 A registry of fleet calibrations. Lengths are millimetres, angles degrees, shares percent, each named in its field;
@@ -124,17 +134,23 @@ def make_app(import_name: str, **folders: Any) -> OpenAPI:
     return app
 
 
-def _read_well(app: OpenAPI) -> None:
-    """The framework joins the lines of a docstring with HTML breaks; the document's text is Markdown."""
+def _complete(app: OpenAPI) -> None:
+    """Say what the framework cannot read off a handler: conditional headers. And turn its HTML breaks into Markdown.
+
+    The doors belong to every application of the process, so what is said already is not said again.
+    """
     for item in app.paths.values():
-        for operation in (item.get, item.put, item.post):
-            if operation is not None and operation.description:
-                operation.description = operation.description.replace("<br/>", "\n").strip()
+        for operation in filter(None, (item.get, item.put, item.post)):
+            operation.description = (operation.description or "").replace("<br/>", "\n").strip()
+            told = {parameter.name for parameter in operation.parameters or ()}
+            for status, header in (("412", _IF_MATCH), ("304", _IF_NONE_MATCH)):
+                if status in operation.responses and header.name not in told:
+                    operation.parameters = [*(operation.parameters or ()), header]
 
 
 def register(app: OpenAPI) -> None:
     """Serve the document and its page; neither needs a key, and neither asks another host for anything."""
-    _read_well(app)
+    _complete(app)
     shown = Path(str(files("flask_openapi3_swagger"))) / "templates" / "swagger"
 
     def openapi() -> Response:

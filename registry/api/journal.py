@@ -24,9 +24,9 @@ class JournalQuery(PageQuery):
 
     from_: Annotated[fields.Time | None, Field(alias="from", description="Not before this time")] = None
     to: Annotated[fields.Time | None, Field(description="Not after this time")] = None
-    person: Annotated[str | None, Field(min_length=1, max_length=200)] = None
+    person: fields.Name | None = None
     vehicle_id: fields.VehicleId | None = None
-    action: Annotated[str | None, Field(min_length=1, max_length=200)] = None
+    action: fields.Name | None = None
 
 
 class JournalAnswer(Answer):

@@ -10,6 +10,7 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from datetime import datetime, timedelta
 from http import HTTPStatus
+from inspect import cleandoc
 from threading import Lock
 from typing import TypeVar, get_type_hints
 
@@ -44,11 +45,13 @@ class Door:
 
 
 def needs(role: Role, *, own_vehicle: bool = False, gated: bool = True) -> Callable[[_View], _View]:
-    """Say what a handler needs of a key. Stands below the route's decorator."""
+    """Say what a handler needs of a key, to the gate and in the document. Stands below the route's decorator."""
+    told = f"Needs the role {role} or one above it{', or the key of the vehicle itself' if own_vehicle else ''}."
 
     def mark(view: _View) -> _View:
         query: type[Query] | None = get_type_hints(view).get("query")
         names = () if query is None else (info.alias or name for name, info in query.model_fields.items())
+        view.__doc__ = f"{cleandoc(view.__doc__ or '')}\n\n{told}"
         vars(view)["door"] = Door(role, own_vehicle, gated, frozenset(names))
         return view
 
@@ -96,8 +99,9 @@ class Gate:
         door = self.doors.get(request.endpoint or "")
         if door is None:
             return
+        text = key()
         if door.gated:
-            g.actor = admitted(actor_of(key()), door, (request.view_args or {}).get("vehicle_id"))
+            g.actor = admitted(actor_of(text), door, (request.view_args or {}).get("vehicle_id"))
         for name, values in request.args.lists():
             if name not in door.query_names:
                 detail = "is not a query parameter of this door: remove it"

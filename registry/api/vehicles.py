@@ -201,7 +201,7 @@ def list_vehicles(query: PageQuery) -> Response:
 @doors.get("/vehicles/<vehicle_id>", responses={200: VehicleWithOverview})
 @needs("reader")
 def get_vehicle(path: VehiclePath) -> Response:
-    """A vehicle with its overview; the `ETag` is what a new statement must name."""
+    """A vehicle with its overview; its ETag is what a new statement must name."""
     with services().read() as c:
         version = stored.current(c, path.vehicle_id)
         standing = overview.of_vehicle(c, version)

@@ -29,6 +29,15 @@ def test_the_document_is_openapi_3_1_and_its_schemas_are_json_schema(call):
     assert document["components"]["securitySchemes"]["key"]["scheme"] == "bearer"
 
 
+def test_conditional_headers_are_described_where_they_count(call):
+    def headers(method, path):
+        return [one["name"] for one in call.operation(method, path)["parameters"] if one["in"] == "header"]
+
+    assert headers("PUT", "/vehicles/LC-07") == ["If-Match"]
+    assert headers("GET", "/vehicles/LC-07/parameters") == ["If-None-Match"]
+    assert headers("GET", "/vehicles/LC-07") == []
+
+
 def references(node):
     if isinstance(node, dict):
         if isinstance(node.get("$ref"), str):
@@ -56,6 +65,8 @@ def test_every_operation_says_what_it_is_and_what_it_may_answer(call):
             assert operation["operationId"] not in seen
             seen.add(operation["operationId"])
             assert operation["summary"]
+            assert "<br" not in operation["description"]
+            assert "Needs the role" in operation["description"]
             assert operation["security"] == [{"key": []}]
             assert {"401", "403", "404", "422", "500"} <= set(operation["responses"])
             declared = {one["name"] for one in operation.get("parameters", []) if one["in"] == "path"}

@@ -66,6 +66,12 @@ def test_with_a_key_that_was_never_issued_every_door_answers_401(call, clock, me
     call.problem(401, method, path, "stranger", prepared(body, clock))
 
 
+@BY_PATH
+def test_without_a_key_nothing_is_said_of_the_query(call, clock, method, path, body, role, own):
+    path = re.sub(r"\?.*", "", path)
+    call.problem(401, method, f"{path}?at=now&colour=red", None, prepared(body, clock))
+
+
 @pytest.mark.parametrize("header", ["", "Bearer", "Bearer ", "Basic a2V5", "key", "bearer\tkey"])
 def test_a_header_that_carries_no_key_is_401(call, header):
     call.problem(401, "GET", "/vehicles", None, headers={"Authorization": header})

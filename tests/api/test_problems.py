@@ -1,5 +1,7 @@
 """Every refusal is a problem document, on every path that machines read."""
 
+import threading
+
 import pytest
 from sqlalchemy import text
 from structlog.testing import capture_logs
@@ -7,7 +9,9 @@ from werkzeug.exceptions import Gone, ImATeapot
 
 from registry import errors
 from registry.api import problems
+from registry.app import create_app
 from registry.errors import FieldError, NothingInForce, Refusal
+from tests.conftest import services_in
 
 CLASSES = [one for one in vars(errors).values() if isinstance(one, type) and issubclass(one, Refusal)]
 
@@ -105,5 +109,8 @@ def test_a_database_that_is_not_reachable_is_alive_but_not_ready(app, services):
     assert response.get_json()["type"] == "/problems/unready"
 
 
-def test_making_an_application_opens_no_connection(tmp_path, services):
-    assert not list(tmp_path.glob("*-wal"))
+def test_making_an_application_opens_no_connection_and_starts_no_thread(tmp_path, clock):
+    threads = threading.active_count()
+    create_app(services_in(tmp_path, clock))
+    assert list(tmp_path.iterdir()) == []
+    assert threading.active_count() == threads

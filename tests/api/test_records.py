@@ -162,6 +162,8 @@ def test_the_journal_is_filtered_and_paged(call, clock, in_force):
         ("/journal?from=yesterday", "/from"),
         ("/journal?from_=2026-03-01T00:00:00Z", "/from_"),
         ("/journal?entry=1", "/entry"),
+        ("/journal?person=%00", "/person"),
+        ("/journal?action=", "/action"),
     ],
 )
 def test_a_query_parameter_that_does_not_fit_is_refused(call, path, place):
