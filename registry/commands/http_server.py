@@ -8,6 +8,8 @@ from __future__ import annotations
 
 import http.client
 import multiprocessing
+import os
+import signal
 import socket
 import threading
 from collections.abc import Callable
@@ -88,7 +90,12 @@ def run(home: Path, address: Address, workers: int, threads: int, when_ready: Ca
     Returns
     -------
     int
-        0 after a signal, else 1: a worker ended by itself.
+        0 after a signal, else 1: workers ended by themselves, again and again.
+
+    Raises
+    ------
+    Exception
+        What ``when_ready`` raised, after the server is down.
     """
     # Forked children would share this process's open database.
     multiprocessing.set_start_method("spawn", force=True)
@@ -103,9 +110,20 @@ def run(home: Path, address: Address, workers: int, threads: int, when_ready: Ca
         blocking_threads=threads,
         log_level=LogLevels.error,
         workers_kill_timeout=_STOP_S,
+        respawn_failed_workers=True,
     )
     stopped = threading.Event()
-    announcer = threading.Thread(target=_announce, args=(address, when_ready, stopped), daemon=True)
+    failed: list[Exception] = []
+
+    def announce() -> None:
+        try:
+            if _answers(address, stopped):
+                when_ready()
+        except Exception as error:  # noqa: BLE001 - raised again in the main thread, once the server is down
+            failed.append(error)
+            os.kill(os.getpid(), signal.SIGTERM)
+
+    announcer = threading.Thread(target=announce, daemon=True)
     server.on_startup(announcer.start)
     try:
         server.serve(target_loader=partial(load_app, home), wrap_loader=False)
@@ -113,7 +131,10 @@ def run(home: Path, address: Address, workers: int, threads: int, when_ready: Ca
         return int(ended.code or 0)
     finally:
         stopped.set()
-        announcer.join()
+        if announcer.is_alive():
+            announcer.join()
+    if failed:
+        raise failed[0]
     return 0
 
 
@@ -128,8 +149,8 @@ def load_app(home: Path) -> Flask:
     return create_app(make_services(Settings.from_environment(home, create=False)))
 
 
-def _announce(address: Address, when_ready: Callable[[], None], stopped: threading.Event) -> None:
-    """Ask for the program's own health until it answers: sockets listen before the application is there."""
+def _answers(address: Address, stopped: threading.Event) -> bool:
+    """Ask for the program's own health until it answers (sockets listen before the application is there) or stops."""
     host = {"0.0.0.0": "127.0.0.1", "::": "::1"}.get(address.host, address.host)
     answered = False
     while not answered and not stopped.wait(_READY_EVERY_S):
@@ -137,9 +158,8 @@ def _announce(address: Address, when_ready: Callable[[], None], stopped: threadi
         try:
             connection.request("GET", "/healthz")
             answered = connection.getresponse().status == http.HTTPStatus.OK
-        except OSError:
+        except (OSError, http.client.HTTPException):
             answered = False
         finally:
             connection.close()
-    if answered:
-        when_ready()
+    return answered

@@ -107,6 +107,40 @@ def test_serving_without_schedule_makes_no_pass_and_ends_on_sigint(rollbook: Com
     assert "a pass was made" not in said
 
 
+def children_of(process: subprocess.Popen[str]) -> list[int]:
+    """The server's own processes; Python's watcher over shared resources is none of them."""
+    found = map(int, Path(f"/proc/{process.pid}/task/{process.pid}/children").read_text().split())
+    return [pid for pid in found if b"spawn_main" in Path(f"/proc/{pid}/cmdline").read_bytes()]
+
+
+def test_a_server_process_that_dies_is_replaced_while_the_other_answers(rollbook: Commands, tug: str):
+    with running("serve", "--home", rollbook.home, "--port", 0, "--no-schedule", "--json") as serving:
+        address = first_document(serving)["address"]
+        before = children_of(serving)
+        os.kill(before[0], signal.SIGKILL)
+        deadline = time.monotonic() + 60
+        while len(set(children_of(serving)) - {before[0]}) < len(before):
+            assert time.monotonic() < deadline
+            assert status_of(f"{address}/healthz") == 200
+            time.sleep(0.1)
+        serving.send_signal(signal.SIGTERM)
+        serving.communicate(timeout=60)
+    assert serving.returncode == 0
+
+
+def test_a_server_whose_schedule_cannot_start_goes_down_and_says_why(rollbook: Commands, tug: str):
+    program = (
+        "import sys; from pathlib import Path; from registry.commands import http_server\n"
+        "def fail(): raise RuntimeError('no schedule today')\n"
+        "http_server.run(Path(sys.argv[1]), http_server.free_address('127.0.0.1', 0), 1, 1, fail)\n"
+    )
+    done = subprocess.run(
+        [sys.executable, "-c", program, rollbook.home], capture_output=True, text=True, check=False, timeout=120
+    )
+    assert done.returncode == 1
+    assert "no schedule today" in done.stderr
+
+
 @pytest.mark.parametrize("arguments", [("--host", "192.0.2.1"), ("--host", "nowhere.invalid")])
 def test_an_address_that_is_not_this_machines_is_refused(rollbook: Commands, tug: str, arguments: tuple[str, str]):
     assert "choose another with --host, --port" in rollbook.refused("serve", *arguments)
