@@ -1,0 +1,1 @@
+"""The numerics against published figures and independent programs, each with its source beside it."""
