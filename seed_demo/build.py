@@ -79,7 +79,7 @@ def build_demo(
     with _simulated(planned, second_process) as take:
         diary = [entry for entry in entries(fleet, planned, take, calendar, deeds.Memory()) if entry.at <= present]
         _live(services, diary, progress)
-    deeds.evening_pass(services)
+    deeds.evening_pass(services, deeds.Memory(), everybody=True)
     with services.read() as c:
         standing = len(alerts.all_open(c))
     return DemoSummary(len(fleet), len(planned), standing, name, password)

@@ -51,6 +51,12 @@ class Memory:
     wrong: dict[str, tuple[str, int]] = field(default_factory=dict)
     to_start: set[str] = field(default_factory=set)
     deaf: set[str] = field(default_factory=set)
+    news: set[str] = field(default_factory=set)
+
+    def renewed(self, vehicle: Vehicle) -> None:
+        """Other parameters are in force: the vehicle is to load them, and the evening's pass to look at it."""
+        self.to_start.add(vehicle.vehicle_id)
+        self.news.add(vehicle.vehicle_id)
 
 
 def person(name: str) -> Actor:
@@ -124,6 +130,7 @@ def hand_in(services: Services, run: DrivenRun, memory: Memory) -> None:
     )
     taken, _ = intake.take_run(services, person(plan.driver), plan.vehicle.vehicle_id, statement)
     memory.last_run[plan.vehicle.vehicle_id] = taken.run_id
+    memory.news.add(plan.vehicle.vehicle_id)
     memory.session_runs.setdefault(f"{plan.vehicle.vehicle_id}/{plan.day}", []).append(taken.run_id)
 
 
@@ -133,10 +140,11 @@ def set_new_baseline(
     """The technician fits and proposes, the approver puts into force."""
     proposed = baseline.propose_baseline(services, person(TECHNICIAN), vehicle.vehicle_id, run_ids, reason)
     adoption.adopt(services, person(APPROVER), proposed.calibration_id, reason, number=proposed.number)
-    memory.to_start.add(vehicle.vehicle_id)
+    memory.renewed(vehicle)
 
 
-def work(services: Services, vehicle: Vehicle, done: Work) -> None:
+def work(services: Services, vehicle: Vehicle, done: Work, memory: Memory) -> None:
+    memory.news.add(vehicle.vehicle_id)
     maintenance.record_maintenance(
         services,
         person("Beni"),
@@ -149,6 +157,7 @@ def work(services: Services, vehicle: Vehicle, done: Work) -> None:
 
 
 def set_aside_last(services: Services, vehicle: Vehicle, memory: Memory) -> None:
+    memory.news.add(vehicle.vehicle_id)
     reason = "the observer saw the right wheel climb the joint of the slab"
     intake.set_aside(services, person(APPROVER), memory.last_run[vehicle.vehicle_id], reason)
 
@@ -176,7 +185,7 @@ def enter_wrongly(services: Services, vehicle: Vehicle, memory: Memory) -> None:
         services, person(APPROVER), proposed.calibration_id, "paper sheet of the spring check", number=proposed.number
     )
     memory.wrong[vehicle.vehicle_id] = (proposed.calibration_id, current.number)
-    memory.to_start.add(vehicle.vehicle_id)
+    memory.renewed(vehicle)
 
 
 def exchanged_digits(text: str) -> str:
@@ -192,16 +201,20 @@ def withdraw_wrong(services: Services, vehicle: Vehicle, memory: Memory) -> None
     calibration_id, number = memory.wrong[vehicle.vehicle_id]
     reason = "two digits of the left tick factor exchanged when it was typed"
     adoption.withdraw(services, person(APPROVER), calibration_id, reason, "reinstate", number)
-    memory.to_start.add(vehicle.vehicle_id)
+    memory.renewed(vehicle)
 
 
-def start_up(services: Services, vehicle: Vehicle, memory: Memory, deaf: bool) -> None:
+def go_deaf(_: Services, vehicle: Vehicle, memory: Memory) -> None:
+    """Its radio fails: from now on the vehicle starts on what it has kept."""
+    memory.deaf.add(vehicle.vehicle_id)
+
+
+def start_up(services: Services, vehicle: Vehicle, memory: Memory) -> None:
     """The vehicle fetches its parameters and reports them; a deaf one loads what it has kept."""
     now = services.now()
     actor = Actor("vehicle", vehicle.vehicle_id)
     kept = memory.loaded.get(vehicle.vehicle_id)
-    if deaf and kept is not None:
-        memory.deaf.add(vehicle.vehicle_id)
+    if vehicle.vehicle_id in memory.deaf and kept is not None:
         age = now.timestamp() - kept.fetched
         statement = BootStatement(kept.calibration_number, kept.digest, "kept", now, age, SOFTWARE)
     else:
@@ -211,15 +224,19 @@ def start_up(services: Services, vehicle: Vehicle, memory: Memory, deaf: bool) -
     boot.report_boot(services, actor, vehicle.vehicle_id, statement)
 
 
-def evening_pass(services: Services) -> None:
-    run_pass(services, as_of=services.now())
+def evening_pass(services: Services, memory: Memory, everybody: bool) -> None:
+    """The schedule's pass: over the whole fleet, or over the vehicles of which something new came in today."""
+    vehicle_ids = None if everybody else sorted(memory.news)
+    memory.news.clear()
+    if vehicle_ids is None or vehicle_ids:
+        run_pass(services, services.now(), vehicle_ids)
 
 
 def morning_desk(services: Services, fleet: tuple[Vehicle, ...], memory: Memory) -> None:
     """Start again what was given new parameters yesterday; see to alerts and proposals, where a story has it."""
     for vehicle in fleet:
         if vehicle.vehicle_id in memory.to_start:
-            start_up(services, vehicle, memory, deaf=vehicle.vehicle_id in memory.deaf)
+            start_up(services, vehicle, memory)
     memory.to_start.clear()
     stories = {vehicle.vehicle_id: vehicle.story for vehicle in fleet}
     now = services.now()
@@ -246,4 +263,4 @@ def _adopt_evaluation(services: Services, vehicle: Vehicle, memory: Memory, afte
         if services.now() - proposed.recorded_at >= after:
             reason = "worn tyres: what the evaluation found from the runs since the last baseline"
             adoption.adopt(services, person(APPROVER), proposed.calibration_id, reason, number=proposed.number)
-            memory.to_start.add(vehicle.vehicle_id)
+            memory.renewed(vehicle)

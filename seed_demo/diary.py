@@ -18,8 +18,9 @@ Act = Callable[[Services], None]
 #: Seconds of a day.
 _REGISTERED, _STARTED_UP, _WORKED = 6 * 3600, 6 * 3600 + 1800, 7 * 3600 + 900
 _DESK, _DECIDED, _PASSED = 7 * 3600 + 2700, 15 * 3600, 20 * 3600
-#: A pass every other day and a start every other week keep the building short; they change nothing in what is found.
-_PASS_EVERY_DAYS = 2
+#: A pass over the whole fleet each week, one over the vehicles with something new each evening, and a start every other
+#: week keep the building short; daily passes over all would find the same.
+_WHOLE_FLEET_EVERY_DAYS = 7
 _START_EVERY_DAYS = 14
 
 
@@ -62,8 +63,8 @@ def entries(
         found.extend(_of_vehicle(fleet, vehicle, calendar, memory))
     for day in range(calendar.days + 1):
         found.append((calendar.at(day, _DESK), partial(deeds.morning_desk, fleet=fleet, memory=memory)))
-        if day % _PASS_EVERY_DAYS == 0:
-            found.append((calendar.at(day, _PASSED), deeds.evening_pass))
+        everybody = day % _WHOLE_FLEET_EVERY_DAYS == 0
+        found.append((calendar.at(day, _PASSED), partial(deeds.evening_pass, memory=memory, everybody=everybody)))
     ordered = sorted(enumerate(found), key=lambda item: (item[1][0], item[0]))
     return [Entry(at, order, act) for order, (at, act) in ordered]
 
@@ -83,11 +84,16 @@ def _of_vehicle(
     yield calendar.at(first, _REGISTERED), partial(deeds.register, vehicle=vehicle, borrowed_from=borrowed)
     yield from _starts(vehicle, calendar, memory)
     for done in story.works:
-        yield calendar.at(calendar.day_of(done.share), _WORKED), partial(deeds.work, vehicle=vehicle, done=done)
+        yield (
+            calendar.at(calendar.day_of(done.share), _WORKED),
+            partial(deeds.work, vehicle=vehicle, done=done, memory=memory),
+        )
     for day in sessions:
         yield calendar.at(day, _DECIDED), partial(_decide, vehicle, day, day == first, memory)
     if story.wrong_entry is not None:
         day = calendar.day_of(story.wrong_entry.share)
+        # On the eve of its day on the slab, so that runs speak against the wrong entry before it is withdrawn.
+        day = next(eve for eve in range(day, day + 7) if is_measuring_day(vehicle, eve + 1))
         yield calendar.at(day, _DECIDED), partial(deeds.enter_wrongly, vehicle=vehicle, memory=memory)
         later = calendar.at(day + story.wrong_entry.days, _DECIDED)
         yield later, partial(deeds.withdraw_wrong, vehicle=vehicle, memory=memory)
@@ -101,10 +107,11 @@ def _starts(vehicle: Vehicle, calendar: Calendar, memory: Memory) -> Iterator[tu
     story = vehicle.story
     first = arrival_day(vehicle, calendar.days)
     last = last_run_day(vehicle, calendar.days)
-    deaf_from = calendar.days + 1 if story.deaf_from is None else calendar.day_of(story.deaf_from)
+    if story.deaf_from is not None:
+        yield calendar.at(calendar.day_of(story.deaf_from), 0), partial(deeds.go_deaf, vehicle=vehicle, memory=memory)
     for day in range(first, last + 1):
         if day == first or (is_measuring_day(vehicle, day) and day % _START_EVERY_DAYS < 7):
-            act = partial(deeds.start_up, vehicle=vehicle, memory=memory, deaf=day >= deaf_from)
+            act = partial(deeds.start_up, vehicle=vehicle, memory=memory)
             yield calendar.at(day, _STARTED_UP + 60 * vehicle.place), act
 
 
