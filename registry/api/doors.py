@@ -38,10 +38,10 @@ def register(app: OpenAPI, services: Services) -> None:
     """
     for resource in _RESOURCES:
         app.register_api(resource.doors)
+    app.after_request(_guarded)
     keys.stand_before(app, services)
     document.register(app)
     health.register(app, services)
-    app.after_request(_guarded)
 
 
 def _guarded(response: Response) -> Response:

@@ -20,6 +20,7 @@ from werkzeug.wrappers import Response as BaseResponse
 
 from registry.api import problems
 from registry.api.bodies import Query
+from registry.api.strict_json import escaped
 from registry.domain.person import Actor, Role
 from registry.errors import FieldError, Invalid, NotAllowed, NotSignedIn
 from registry.procedures import people
@@ -105,13 +106,14 @@ class Gate:
         for name, values in request.args.lists():
             if name not in door.query_names:
                 detail = "is not a query parameter of this door: remove it"
-                raise Invalid(f"{name} {detail}", (FieldError(f"/{name}", detail),))
+                raise Invalid(f"{name} {detail}", (FieldError(f"/{escaped(name)}", detail),))
             if len(values) > 1:
-                raise Invalid(f"{name} is given twice", (FieldError(f"/{name}", "is given twice: keep one"),))
+                raise Invalid(f"{name} is given twice", (FieldError(f"/{escaped(name)}", "is given twice: keep one"),))
 
     def slow_down(self, response: Response) -> BaseResponse:
         """Count a wrong key against its address; from too many of them the answer is to wait."""
-        if response.status_code != HTTPStatus.UNAUTHORIZED or "Authorization" not in request.headers:
+        refused = response.status_code == HTTPStatus.UNAUTHORIZED and request.endpoint in self.doors
+        if not refused or "Authorization" not in request.headers:
             return response
         come_back = self.wrong_keys.count(request.remote_addr or "", self.services.now())
         if come_back is None:

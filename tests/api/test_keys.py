@@ -110,6 +110,7 @@ def test_wrong_keys_are_slowed_down_and_valid_ones_are_not(call, clock):
     assert refused.status_code == 429
     assert refused.get_json()["type"] == "/problems/too-many-requests"
     assert "Retry-After" in refused.headers
+    assert refused.headers["X-Content-Type-Options"] == "nosniff"
     call.problem(429, "GET", "/vehicles/LC-07/parameters", "stranger")
     for _ in range(50):
         assert call("GET", "/vehicles", "reader").status_code == 200
