@@ -7,7 +7,6 @@ from collections.abc import Callable, Sequence
 from contextlib import AbstractContextManager
 from dataclasses import dataclass, field, replace
 from datetime import datetime, timedelta
-from itertools import cycle
 from pathlib import Path
 from typing import Any
 
@@ -163,11 +162,11 @@ class DrivenVehicle:
         return runs
 
     def work(self, count: int, hours: float = 12.0) -> list[Run]:
-        """Ordinary runs, some hours apart."""
+        """Ordinary runs, some hours apart, going on in the round of what is driven."""
         runs = []
-        for _, legs in zip(range(count), cycle(WORK), strict=False):
+        for _ in range(count):
             self.clock.move(hours=hours)
-            runs.append(self.hand_in(legs))
+            runs.append(self.hand_in(WORK[self.number % len(WORK)]))
         return runs
 
     def change(self, left: float = 0.0, right: float = 0.0, width: float = 0.0) -> None:
