@@ -84,6 +84,8 @@ class Fit:
         Normal score of each run's distance: above 3.5 the run does not fit the others.
     influence : (n, 3) float
         Relative change of (k_L, k_R, W) if the run were left out, to first order.
+    u_without : (n, 3) float
+        Standard uncertainties of (tick factor, side ratio, width) if the run were left out; zero where held.
     deviance : float
         Minus twice the restricted log-likelihood, up to a constant of the data; smaller is better.
     """
@@ -100,6 +102,7 @@ class Fit:
     residual: Float
     normalised: Float
     influence: Float
+    u_without: Float
     deviance: float
 
     @property
@@ -174,10 +177,12 @@ def _summarise(model: Misclosures, hold: Hold | None, status: Status) -> Fit:
         runs.count @ np.log(weight)
     )
     to_relative = relative_from_quantities(float(model.quantities[1]))
+    scale = max(1.0, birge**2) if birge is not None else 1.0
+    influence, variance_without = _influence(rows, white * np.sqrt(weight)[:, None], model.free)
     return Fit(
         status=status,
         parameters=to_parameters(model.quantities),
-        covariance=_covariance(rows, root, max(1.0, birge**2) if birge is not None else 1.0, hold),
+        covariance=_covariance(rows, root, scale, hold),
         rolling_noise_m=model.parts.rolling,
         spread=float(np.sqrt(model.parts.spread)),
         birge_ratio=birge,
@@ -186,7 +191,8 @@ def _summarise(model: Misclosures, hold: Hold | None, status: Status) -> Fit:
         weight=weight,
         residual=runs.e,
         normalised=normal_score(distance, runs.count),
-        influence=_influence(rows, white * np.sqrt(weight)[:, None], model.free) @ to_relative.T,
+        influence=influence @ to_relative.T,
+        u_without=np.sqrt(scale * variance_without),
         deviance=float(np.linalg.slogdet(rows.T @ rows)[1]) + weighted - log_determinants,
     )
 
@@ -218,15 +224,16 @@ def _covariance(rows: Float, root: Float, scale: float, hold: Hold | None) -> Fl
     return np.asarray(covariance + passed @ held @ passed.T)
 
 
-def _influence(rows: Float, white: Float, free: Bool) -> Float:
-    """Change (n, 3) of the quantities without each run: one Newton step on the remaining ones."""
+def _influence(rows: Float, white: Float, free: Bool) -> tuple[Float, Float]:
+    """Change (n, 3) of the quantities without each run, one Newton step on the remaining ones, and their variances."""
     count = white.shape[0]
     own = rows[: 4 * count].reshape(count, 4, 3)[:, :, free]
     information = (rows.T @ rows)[np.ix_(free, free)]
-    rest = information - own.transpose(0, 2, 1) @ own
-    result = np.zeros((count, 3))
-    result[:, free] = np.linalg.solve(rest, -(own.transpose(0, 2, 1) @ white[:, :, None]))[:, :, 0]
-    return result
+    rest = np.linalg.inv(information - own.transpose(0, 2, 1) @ own)
+    change, variance = np.zeros((count, 3)), np.zeros((count, 3))
+    change[:, free] = -(rest @ own.transpose(0, 2, 1) @ white[:, :, None])[:, :, 0]
+    variance[:, free] = np.einsum("nii->ni", rest)
+    return change, variance
 
 
 def scores_against(

@@ -14,7 +14,7 @@ from registry.domain.run import Run
 from registry.domain.vehicle import VehicleVersion
 from registry.numerics.arrays import Bool, Float
 from registry.numerics.closure_map import ClosureMap
-from registry.numerics.conformity import ACT_AT, WATCH_AT, probability_beyond
+from registry.numerics.conformity import ACT_AT, probability_beyond
 from registry.numerics.fit import DEFAULT_ROLLING_NOISE_M, Fit, fit, misclosures, scores_against
 from registry.numerics.observability import (
     deviation,
@@ -38,6 +38,8 @@ from registry.procedures.evidence import Evidence, parameter_array, parameters_o
 from registry.storage.engine import Connection
 
 _LEAST_DEGREES = 1.0
+#: The other runs agree with one when they are off by this many of their own standard uncertainties.
+_CLEARLY = 2.0
 #: Runs that leave every quantity looser than this (relative) do not stand for a state of their own.
 _TELLS_SOMETHING = 0.01
 #: Half of the runs beyond this normal score: the fit hangs at a wrong whole turn, or the counting changed.
@@ -61,7 +63,7 @@ class Verdict:
     Attributes
     ----------
     confirmed : (bool, bool, bool)
-        Whether each quantity would stay likely beyond its tolerance without any single run.
+        Whether each quantity would stay beyond its tolerance, and clearly off, without any single run.
     proposal : CalibrationResult or None
         The fit as a calibration, when it is beyond tolerance and nothing must be made up for it.
     new_maps : dict of str to ClosureMap
@@ -141,29 +143,44 @@ def _seen(answer: Fit, version: VehicleVersion) -> Bool:
 def _judge(
     answer: Fit, calibration: Calibration, version: VehicleVersion
 ) -> tuple[tuple[QuantityFinding, QuantityFinding, QuantityFinding], tuple[bool, bool, bool]]:
-    """Deviation of each observed quantity, and whether it would stay likely beyond without any single run."""
+    """Deviation of each observed quantity, and whether all but any single run say of it that it is beyond."""
     reference = parameter_array(calibration.result.parameters)
     tolerance = np.array(version.statement.tolerance.as_tuple())
     away = deviation(answer.parameters, reference)
     seen = _seen(answer, version)
-    own = quantity_covariance(np.array(calibration.result.covariance_relative), reference)
-    u = np.sqrt(answer.u_quantities**2 + np.diag(own))
-    without = _without_each_run(answer, reference)
+    own = np.diag(quantity_covariance(np.array(calibration.result.covariance_relative), reference))
+    u = np.sqrt(answer.u_quantities**2 + own)
+    agreed = _agreed(
+        np.sign(away) * _without_each_run(answer, reference), np.sqrt(answer.u_without**2 + own), tolerance
+    )
     degrees = max(1.0, answer.degrees_of_freedom)
     findings: list[QuantityFinding] = []
-    confirmed: list[bool] = []
     for index in range(3):
         if not seen[index]:
             findings.append(QuantityFinding(None, None, observed=False, probability_beyond=None))
-            confirmed.append(False)
             continue
         limit, sigma = float(tolerance[index]), float(u[index])
         probability = probability_beyond(float(away[index]), sigma, -limit, limit, degrees)
-        # The run without which the deviation is smallest decides: the probability falls with the deviation.
-        least = float(np.abs(without[:, index]).min()) if without.shape[0] > 1 else 0.0
         findings.append(QuantityFinding(float(away[index]), sigma, observed=True, probability_beyond=probability))
-        confirmed.append(probability_beyond(least, sigma, -limit, limit, degrees) >= WATCH_AT)
+    confirmed = tuple(bool(value) for value in agreed & seen)
     return (findings[0], findings[1], findings[2]), (confirmed[0], confirmed[1], confirmed[2])
+
+
+def _agreed(without: Float, u: Float, tolerance: Float) -> Bool:
+    """Whether each quantity (3,) stays beyond its tolerance, and clearly off, without any single run.
+
+    Parameters
+    ----------
+    without, u : (n, 3) float
+        Deviations without each run, positive on the side where all runs together see it, and their uncertainties.
+
+    Notes
+    -----
+    Both are asked: what the other runs do not determine may lie anywhere without it, far beyond a tolerance too.
+    """
+    if without.shape[0] < 2:
+        return np.zeros(3, dtype=np.bool_)
+    return np.asarray(np.all((without >= tolerance) & (without >= _CLEARLY * u), axis=0))
 
 
 def _without_each_run(answer: Fit, reference: Float) -> Float:
