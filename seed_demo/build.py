@@ -1,28 +1,26 @@
-"""Build the demo: simulate ahead in a second process, and live the days through the real procedures and passes.
+"""Build the demo: live the days of the invented fleet through the real procedures and passes.
 
 Use ``from seed_demo.build import build_demo``.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
-from concurrent.futures import ProcessPoolExecutor
-from contextlib import contextmanager
+from collections.abc import Callable
+from contextlib import ExitStack
 from dataclasses import dataclass, replace
 from datetime import datetime
-from multiprocessing import get_context
 
 from registry.services import Services
 from registry.storage import alerts
 from seed_demo import deeds
+from seed_demo.beside import MakePass, Take, pass_here, passes_shared, simulated_ahead
 from seed_demo.diary import Calendar, Entry, entries
-from seed_demo.drives import DrivenRun, RunPlan, drive, plans, with_mishaps
+from seed_demo.drives import RunPlan, drive, plans, with_mishaps
 from seed_demo.fleet import Vehicle
 from seed_demo.saltworks import vehicles
 
 #: Fewer days leave no room for a vehicle to have been silent for a month.
 FEWEST_DAYS = 42
-_BATCH = 8
 
 Progress = Callable[[float, str], None]
 
@@ -43,7 +41,7 @@ def build_demo(
     days: int = 180,
     progress: Progress | None = None,
     fleet: tuple[Vehicle, ...] | None = None,
-    second_process: bool = True,
+    second_processes: bool = True,
 ) -> DemoSummary:
     """Fill an empty, migrated home with the fleet's history up to now.
 
@@ -57,8 +55,8 @@ def build_demo(
         Told the share done (0 to 1) and what is going on, once a day of the history.
     fleet : tuple of Vehicle, optional
         Some of :func:`seed_demo.saltworks.vehicles`; all of them by default.
-    second_process : bool
-        Simulate in a second process ahead of the replay. The outcome is the same without.
+    second_processes : bool
+        Simulate ahead of the replay and share the passes in processes beside it. The outcome is the same without.
 
     Returns
     -------
@@ -76,10 +74,16 @@ def build_demo(
     calendar = Calendar(present.date(), days)
     planned = _planned(fleet, calendar, present.timestamp())
     name, password = deeds.hire(_at(services, calendar.at(0, 0)))
-    with _simulated(planned, second_process) as take:
-        diary = [entry for entry in entries(fleet, planned, take, calendar, deeds.Memory()) if entry.at <= present]
+    with ExitStack() as stack:
+        take: Take = drive
+        make_pass: MakePass = pass_here
+        if second_processes:
+            take = stack.enter_context(simulated_ahead(planned))
+            make_pass = stack.enter_context(passes_shared(services.settings))
+        memory = deeds.Memory()
+        diary = [one for one in entries(fleet, planned, (take, make_pass), calendar, memory) if one.at <= present]
         _live(services, diary, progress)
-    deeds.evening_pass(services, deeds.Memory(), everybody=True)
+        deeds.evening_pass(services, memory, make_pass, everybody=True)
     with services.read() as c:
         standing = len(alerts.all_open(c))
     return DemoSummary(len(fleet), len(planned), standing, name, password)
@@ -108,25 +112,3 @@ def _live(services: Services, diary: list[Entry], progress: Progress | None) -> 
         entry.act(_at(services, entry.at))
     if progress is not None:
         progress(1.0, "the present day")
-
-
-@contextmanager
-def _simulated(planned: list[RunPlan], second_process: bool) -> Iterator[Callable[[RunPlan], DrivenRun]]:
-    """Answers each plan's run in turn. Plans are asked for in the order given, so one stream serves them all."""
-    if not second_process:
-        yield drive
-        return
-    # Spawned, not forked: the caller may hold threads (a progress bar) and an open database.
-    with ProcessPoolExecutor(max_workers=1, mp_context=get_context("spawn")) as pool:
-        stream = pool.map(drive, planned, chunksize=_BATCH)
-
-        def take(plan: RunPlan) -> DrivenRun:
-            run = next(stream)
-            if run.plan.run_key != plan.run_key:
-                raise RuntimeError(f"the simulation answered {run.plan.run_key} where {plan.run_key} was due")
-            return run
-
-        try:
-            yield take
-        finally:
-            pool.shutdown(wait=True, cancel_futures=True)

@@ -13,10 +13,10 @@ from secrets import token_urlsafe
 from registry.domain.boot import BootStatement
 from registry.domain.person import Actor, Role
 from registry.domain.vehicle import Parameters, ReferencePoint, VehicleStatement
-from registry.jobs.fleet_pass import run_pass
 from registry.procedures import adoption, alerting, baseline, boot, intake, maintenance, people, registration
 from registry.services import Services
 from registry.storage import alerts, calibrations, in_force
+from seed_demo.beside import MakePass
 from seed_demo.drives import DrivenRun
 from seed_demo.fleet import Vehicle, Work
 
@@ -52,6 +52,7 @@ class Memory:
     to_start: set[str] = field(default_factory=set)
     deaf: set[str] = field(default_factory=set)
     news: set[str] = field(default_factory=set)
+    registered: set[str] = field(default_factory=set)
 
     def renewed(self, vehicle: Vehicle) -> None:
         """Other parameters are in force: the vehicle is to load them, and the evening's pass to look at it."""
@@ -71,7 +72,7 @@ def hire(services: Services) -> tuple[str, str]:
     return APPROVER, passwords[APPROVER]
 
 
-def register(services: Services, vehicle: Vehicle, borrowed_from: Vehicle | None) -> None:
+def register(services: Services, vehicle: Vehicle, borrowed_from: Vehicle | None, memory: Memory) -> None:
     """Enter the vehicle with its ruler values, give it a key and provisional parameters to drive its first runs on."""
     make = vehicle.make
     nominal = Parameters(make.ruler_m_per_tick, make.ruler_m_per_tick, make.ruler_width_m)
@@ -86,6 +87,7 @@ def register(services: Services, vehicle: Vehicle, borrowed_from: Vehicle | None
         reference_point=ReferencePoint(make.mark_ahead_m, make.mark_left_m),
     )
     registration.put_vehicle(services, person(APPROVER), vehicle.vehicle_id, statement, None)
+    memory.registered.add(vehicle.vehicle_id)
     people.issue_key(services, person(KEEPER), vehicle_id=vehicle.vehicle_id)
     values, shares, note = nominal, (0.02, 0.02, 0.3), "as measured with a ruler, to drive the calibration runs on"
     if borrowed_from is not None:
@@ -224,12 +226,12 @@ def start_up(services: Services, vehicle: Vehicle, memory: Memory) -> None:
     boot.report_boot(services, actor, vehicle.vehicle_id, statement)
 
 
-def evening_pass(services: Services, memory: Memory, everybody: bool) -> None:
+def evening_pass(services: Services, memory: Memory, make_pass: MakePass, everybody: bool) -> None:
     """The schedule's pass: over the whole fleet, or over the vehicles of which something new came in today."""
-    vehicle_ids = None if everybody else sorted(memory.news)
+    vehicle_ids = sorted(memory.registered if everybody else memory.news)
     memory.news.clear()
-    if vehicle_ids is None or vehicle_ids:
-        run_pass(services, services.now(), vehicle_ids)
+    if vehicle_ids:
+        make_pass(services, vehicle_ids)
 
 
 def morning_desk(services: Services, fleet: tuple[Vehicle, ...], memory: Memory) -> None:

@@ -9,8 +9,9 @@ from functools import partial
 
 from registry.services import Services
 from seed_demo import deeds
+from seed_demo.beside import MakePass, Take
 from seed_demo.deeds import Memory
-from seed_demo.drives import DrivenRun, RunPlan, arrival_day, is_measuring_day, last_run_day, session_days, sister_of
+from seed_demo.drives import RunPlan, arrival_day, is_measuring_day, last_run_day, session_days, sister_of
 from seed_demo.fleet import Vehicle
 
 Act = Callable[[Services], None]
@@ -51,11 +52,12 @@ class Calendar:
 def entries(
     fleet: tuple[Vehicle, ...],
     planned: list[RunPlan],
-    take: Callable[[RunPlan], DrivenRun],
+    by: tuple[Take, MakePass],
     calendar: Calendar,
     memory: Memory,
 ) -> list[Entry]:
-    """All that happens to a fleet, sorted by time. ``take`` answers the simulated run of a plan when it is due."""
+    """All that happens to a fleet, sorted by time. ``by`` answers a run when it is due, and makes the passes."""
+    take, make_pass = by
     found: list[tuple[datetime, Act]] = [
         (calendar.at(plan.day, plan.second_of_day), partial(_hand_in, plan, take, memory)) for plan in planned
     ]
@@ -64,12 +66,17 @@ def entries(
     for day in range(calendar.days + 1):
         found.append((calendar.at(day, _DESK), partial(deeds.morning_desk, fleet=fleet, memory=memory)))
         everybody = day % _WHOLE_FLEET_EVERY_DAYS == 0
-        found.append((calendar.at(day, _PASSED), partial(deeds.evening_pass, memory=memory, everybody=everybody)))
+        found.append(
+            (
+                calendar.at(day, _PASSED),
+                partial(deeds.evening_pass, memory=memory, make_pass=make_pass, everybody=everybody),
+            )
+        )
     ordered = sorted(enumerate(found), key=lambda item: (item[1][0], item[0]))
     return [Entry(at, order, act) for order, (at, act) in ordered]
 
 
-def _hand_in(plan: RunPlan, take: Callable[[RunPlan], DrivenRun], memory: Memory, services: Services) -> None:
+def _hand_in(plan: RunPlan, take: Take, memory: Memory, services: Services) -> None:
     deeds.hand_in(services, take(plan), memory)
 
 
@@ -81,7 +88,10 @@ def _of_vehicle(
     first = arrival_day(vehicle, calendar.days)
     sessions = session_days(vehicle, calendar.days)
     borrowed = None if sessions else sister_of(vehicle, fleet)
-    yield calendar.at(first, _REGISTERED), partial(deeds.register, vehicle=vehicle, borrowed_from=borrowed)
+    yield (
+        calendar.at(first, _REGISTERED),
+        partial(deeds.register, vehicle=vehicle, borrowed_from=borrowed, memory=memory),
+    )
     yield from _starts(vehicle, calendar, memory)
     for done in story.works:
         yield (

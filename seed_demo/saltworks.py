@@ -139,7 +139,7 @@ _STORIES: tuple[tuple[str, Make, Story], ...] = (
         HAULER,
         Story(
             "four new tyres in one night, recorded by nobody",
-            changes=(Change(0.38, 0.38, left=0.014, right=0.014),),
+            changes=(Change(0.90, 0.90, left=0.014, right=0.014),),
             works=(Work(0.2, "towed", None, "pulled out of pan 9 with the winch"),),
             acknowledges={"beyond_tolerance": 2},
         ),

@@ -99,13 +99,13 @@ def test_a_history_too_short_for_its_stories_is_refused(tmp_path: Path) -> None:
     services.close()
 
 
-def test_the_same_history_comes_with_and_without_a_second_process(tmp_path: Path) -> None:
+def test_the_same_history_comes_with_and_without_second_processes(tmp_path: Path) -> None:
     digests = []
-    for second_process in (False, True):
-        folder = tmp_path / str(second_process)
+    for beside in (False, True):
+        folder = tmp_path / str(beside)
         folder.mkdir()
         services = _migrated(folder)
-        build_demo(services, FEWEST_DAYS, fleet=(FLEET["ruff"],), second_process=second_process)
+        build_demo(services, FEWEST_DAYS, fleet=(FLEET["ruff"],), second_processes=beside)
         demo = Demo(services, DemoSummary(1, 0, 0, "", ""), [])
         digests.append([(run.run_key, run.started_at, run.counts_digest, run.closure) for run in demo.runs("ruff")])
         services.close()
