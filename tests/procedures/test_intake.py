@@ -17,6 +17,7 @@ from registry.domain.run import ClosureStatement, Conditions, Run
 from registry.domain.vehicle import Parameters
 from registry.errors import Conflict, Invalid, NotAllowed, NotFound, TooLarge
 from registry.procedures import intake
+from registry.procedures.baseline import propose_entered
 from registry.procedures.intake import RunStatement, check_run, restore, set_aside, take_run
 from registry.procedures.registration import put_vehicle
 from registry.storage import counts_blob, journal, runs
@@ -200,16 +201,29 @@ def test_nothing_in_force_gives_no_misclosure(driven: DrivenVehicle) -> None:
 
 
 def test_the_misclosure_is_by_what_was_in_force_when_the_run_was_driven(calibrated: DrivenVehicle) -> None:
+    then = calibrated.clock() - timedelta(minutes=30)
     run = calibrated.hand_in(straight(10.0))
-    early = calibrated.hand_in(straight(10.0), started_at=calibrated.clock() - timedelta(days=1, minutes=30))
+    values = Parameters(4.0e-4, 4.0e-4, 0.868)
+    u_m = (4e-7, 4e-7, 0.001)
+    made = propose_entered(calibrated.services, TECHNICIAN, VEHICLE, "entered", values, u_m, "wrongly typed")
+    calibrated.put_in_force(made)
+    calibrated.clock.move(minutes=10)
+    old = calibrated.hand_in(straight(10.0), started_at=then)
+    new = calibrated.hand_in(straight(10.0), started_at=calibrated.clock() - timedelta(minutes=2))
+    for one, off_m in ((old, 0.0), (new, 10.0 - 10.0 * 4.0 / 3.5045)):
+        assert one.misclosure is not None
+        assert one.misclosure.x_m == pytest.approx(off_m, abs=0.03)
     assert run.misclosure is not None
     assert run.misclosure.x_m is not None
     assert run.misclosure.distance_m is None
     # 10 m: closure 5 mm and rolling noise 1.6 mm; four standard deviations.
     assert abs(run.misclosure.x_m) < 4 * math.hypot(0.005, 0.0016)
-    # Nothing was in force the day before; then it is what is in force now.
+
+
+def test_a_run_from_before_anything_was_in_force_closes_by_what_is_in_force_now(calibrated: DrivenVehicle) -> None:
+    early = calibrated.hand_in(straight(10.0), started_at=calibrated.clock() - timedelta(days=3))
     assert early.misclosure is not None
-    assert abs(early.misclosure.x_m or 1.0) < 4 * math.hypot(0.005, 0.0016)
+    assert early.misclosure.x_m == pytest.approx(0.0, abs=0.03)
 
 
 def test_the_misclosure_shows_a_wrong_end_with_its_sign(calibrated: DrivenVehicle) -> None:
