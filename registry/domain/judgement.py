@@ -26,8 +26,9 @@ _FAR = 2.0
 
 
 def percent(value: float) -> str:
-    """A relative value as signed percent with two decimals."""
-    return f"{100.0 * value:+.2f} %"
+    """A relative value as signed percent with two decimals; nothing has no sign."""
+    figure = round(100.0 * value, 2)
+    return "0.00 %" if figure == 0.0 else f"{figure:+.2f} %"
 
 
 def finding_of(quantities: Sequence[QuantityFinding], *, confirmed: bool) -> Finding:
@@ -52,11 +53,12 @@ def message_of(quantities: Sequence[QuantityFinding], finding: Finding, runs_use
         for name, item in seen
         if item.deviation is not None and item.u is not None
     )
+    runs = "1 run" if runs_used == 1 else f"{runs_used} runs"
     opening = {
-        "within": f"Within tolerance by {runs_used} runs: {figures}.",
-        "uncertain": f"Perhaps beyond tolerance by {runs_used} runs: {figures}.",
-        "beyond": f"Beyond tolerance by {runs_used} runs: {figures}.",
-        "cannot_tell": f"{runs_used} runs, and none of the quantities is determined.",
+        "within": f"Within tolerance by {runs}: {figures}.",
+        "uncertain": f"Perhaps beyond tolerance by {runs}: {figures}.",
+        "beyond": f"Beyond tolerance by {runs}: {figures}.",
+        "cannot_tell": f"{runs}, and none of the quantities is determined.",
     }[finding]
     alone = "" if confirmed else " It rests on one run alone; a second one must agree."
     missing = cannot_tell((quantities[0].observed, quantities[1].observed, quantities[2].observed))
