@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from flask import current_app
+from flask import current_app, g
 from flask_login import current_user
 
 from registry.domain.person import Actor, Person, Role
@@ -17,14 +17,21 @@ def services() -> Services:
     return running
 
 
+def forget_person() -> None:
+    """Answer the rest of this request as to nobody: who is signed in may be just what cannot be read."""
+    g.rollbook_nobody = True
+
+
 def person() -> Person | None:
     """The person who is signed in, if anyone is."""
+    if g.get("rollbook_nobody", False):
+        return None
     return current_user.person if current_user.is_authenticated else None
 
 
 def may(role: Role) -> bool:
     """Whether whoever is signed in may do what ``role`` may do; pages show only what they may."""
-    return current_user.is_authenticated and actor().may(role)
+    return person() is not None and actor().may(role)
 
 
 def actor() -> Actor:

@@ -120,7 +120,7 @@ def decision_on(
         Forms as they came back; new ones otherwise.
     """
     held = next((one for one in known if one.standing == "in force" and one != calibration), None)
-    earlier = tuple(one for one in reversed(known) if one.standing == "superseded")
+    earlier = tuple(one for one in reversed(known) if one.standing == "superseded" and one.in_force_from)
     identity = calibration.calibration_id
     taking_back = withdrawal or WithdrawalForm(key=f"withdrawal-{identity}")
     taking_back.number.choices = {str(one.number): f"no. {one.number}" for one in earlier}

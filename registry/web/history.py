@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from datetime import datetime
+from datetime import datetime, timedelta
 from itertools import zip_longest
 from typing import Literal
 
@@ -25,6 +25,10 @@ LINE_WORDS: dict[Line, str] = {
     "width": "Effective width",
 }
 LINE_UNITS: dict[Line, str] = {"left": "mm per tick", "right": "mm per tick", "side_ratio": "%", "width": "mm"}
+
+
+#: A corridor that held for a smaller share of the time shown is no wider than two pixels.
+SEEN_SHARE = 0.01
 
 
 @dataclass(frozen=True)
@@ -80,6 +84,25 @@ class History:
     def drawable(self) -> bool:
         """Whether there is a value to draw at all: a corridor, or an estimate."""
         return bool(self.corridors) or any(point.value is not None for point in self.points)
+
+    @property
+    def lasts(self) -> timedelta:
+        """From the first to the last moment that the history shows."""
+        moments = [moment for one in self.corridors for moment in (one.from_at, one.to_at)]
+        moments += [point.as_of for point in self.points] + [event.at for event in self.events]
+        return max(moments) - min(moments) if moments else timedelta(0)
+
+    def extent(self) -> tuple[float, float]:
+        """Low and high end of what a chart must show: every estimate, and the corridors that lasted long enough to see.
+
+        Values that held for an hour, such as provisional ones, may lie far off and would press all else into a line.
+        """
+        long = [one for one in self.corridors if one.to_at - one.from_at >= SEEN_SHARE * self.lasts]
+        ends = [end for one in long or self.corridors for end in (one.low, one.high)]
+        for point in self.points:
+            if point.value is not None and point.expanded is not None:
+                ends += [point.value - point.expanded, point.value + point.expanded]
+        return min(ends), max(ends)
 
     @property
     def unit(self) -> str:

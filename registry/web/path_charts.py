@@ -8,11 +8,11 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Any, Literal
+from typing import Literal
 
 import altair as alt
 
-from registry.web.charts import FONT, INKS, Document, Inks, Shade, held_width, look
+from registry.web.charts import FONT, INKS, Document, Inks, Rows, Shade, finished, held_width
 from registry.web.figures import decimals
 
 HIGHEST = 400
@@ -20,7 +20,8 @@ LOWEST = 220
 #: More points than a screen can show apart are no truer: 600 on a path of 200 m is one each third of a metre.
 MOST_POINTS = 600
 #: Room round the plot for axis labels, in pixels.
-MARGIN_WIDE = 56
+MARGIN_WIDE = 64
+AXIS_WIDE = 46
 
 #: A thin upright cross, as surveyors draw a mark.
 PLUS = "M-0.6,0H0.6M0,-0.6V0.6"
@@ -80,9 +81,21 @@ def extent_of(xs: Sequence[float], ys: Sequence[float], width: int) -> Extent:
 def _axes(extent: Extent, unit: str, per_m: float) -> tuple[alt.X, alt.Y]:
     x_scale = alt.Scale(domain=[extent.low_x * per_m, extent.high_x * per_m], nice=False, zero=False)
     y_scale = alt.Scale(domain=[extent.low_y * per_m, extent.high_y * per_m], nice=False, zero=False)
-    x = alt.X("x:Q", scale=x_scale, axis=alt.Axis(title=f"ahead, {unit}", tickCount=6))
-    left = alt.Axis(title=f"left, {unit}", titleAngle=0, titleAlign="left", titleY=-8, titleX=0, tickCount=5)
-    return x, alt.Y("y:Q", scale=y_scale, axis=left)
+    x = alt.X(
+        "x", type="quantitative", scale=x_scale, axis=alt.Axis(title=f"ahead, {unit}", tickCount=6, labelBound=True)
+    )
+    # An axis of fixed width keeps the plot, and with it the one scale, as wide as it was reckoned.
+    left = alt.Axis(
+        title=f"left, {unit}",
+        titleAngle=0,
+        titleAlign="left",
+        titleY=-8,
+        titleX=0,
+        tickCount=5,
+        minExtent=AXIS_WIDE,
+        maxExtent=AXIS_WIDE,
+    )
+    return x, alt.Y("y", type="quantitative", scale=y_scale, axis=left)
 
 
 def _dashes(names: list[str]) -> alt.Scale:
@@ -104,30 +117,56 @@ def _legend(kind: Literal["stroke", "symbol"], inks: Inks) -> alt.Legend:
     return alt.Legend(orient="top", direction="vertical", symbolFillColor=inks.ink, symbolStrokeColor=inks.ink)
 
 
-def _mark_layers(mark: Mark | None, axes: tuple[alt.X, alt.Y], inks: Inks, per_m: float) -> list[alt.Chart]:
+def _mark_rows(mark: Mark | None, per_m: float) -> Rows:
     if mark is None:
-        return []
-    x, y = axes
-    layers = []
-    outline = [{"x": px * per_m, "y": py * per_m, "i": i} for i, (px, py) in enumerate(mark.ellipse_m)]
-    if outline:
-        ellipse = alt.Chart(alt.InlineData(values=outline))
-        layers.append(
-            ellipse.mark_line(color=inks.soft, strokeWidth=1.5, fill=inks.corridor, fillOpacity=0.6).encode(
-                x=x, y=y, order="i:Q"
-            )
-        )
-    cross = alt.Chart(alt.InlineData(values=[{"x": mark.x_m * per_m, "y": mark.y_m * per_m}]))
-    layers.append(
-        cross.mark_point(color=inks.ink, shape=PLUS, size=500, filled=False, strokeWidth=2, opacity=1).encode(x=x, y=y)
-    )
-    return layers
+        return {}
+    rows: Rows = {}
+    if mark.ellipse_m:
+        rows["ellipse"] = [{"x": x * per_m, "y": y * per_m, "i": i} for i, (x, y) in enumerate(mark.ellipse_m)]
+    rows["mark"] = [{"x": mark.x_m * per_m, "y": mark.y_m * per_m}]
+    return rows
 
 
-def _finished(chart: alt.LayerChart | alt.FacetChart, extent: Extent, inks: Inks, description: str) -> Document:
-    document: Document = chart.properties(width=extent.width, height=extent.height, description=description).to_dict()
-    document["config"] = look(inks)
-    return document
+def _layers(name: str, axes: tuple[alt.X, alt.Y], names: list[str], inks: Inks) -> list[alt.Chart]:
+    """What draws the rows of one name, the lowest first."""
+    base = alt.Chart(alt.NamedData(name))
+    order, by = alt.Order("i", type="quantitative"), alt.Detail("by", type="nominal")
+    if name == "paths":
+        dash = alt.StrokeDash("by", type="nominal", scale=_dashes(names), legend=_legend("stroke", inks))
+        return [base.mark_line(color=inks.ink, strokeWidth=1.6).encode(*axes, order, by, dash)]
+    if name == "ellipse":
+        line = base.mark_line(color=inks.soft, strokeWidth=1.5, fill=inks.corridor, fillOpacity=0.6)
+        return [line.encode(*axes, order)]
+    if name == "mark":
+        plus = base.mark_point(color=inks.ink, shape=PLUS, size=500, filled=False, strokeWidth=2, opacity=1)
+        return [plus.encode(*axes)]
+    if name == "start":
+        word = base.mark_text(color=inks.soft, dy=14, font=FONT, fontSize=12, text="start")
+        return [base.mark_point(color=inks.ink, filled=True, opacity=1, size=60).encode(*axes), word.encode(*axes)]
+    shape = alt.Shape("by", type="nominal", scale=_shapes(names), legend=_legend("symbol", inks))
+    tips = [alt.Tooltip("by", type="nominal", title="by"), alt.Tooltip("said", type="nominal", title="end")]
+    return [base.mark_point(color=inks.ink, fill=inks.ink, opacity=1, size=110).encode(*axes, shape, tooltip=tips)]
+
+
+@dataclass(frozen=True)
+class _Drawing:
+    """What a chart of a run is drawn from: rows by layer, the lowest first, on one extent of the floor."""
+
+    rows: Rows
+    names: list[str]
+    unit: str
+    per_m: float
+    description: str
+
+    def document(self, shade: Shade, width: int) -> Document:
+        """The chart."""
+        inks = INKS[shade]
+        points = [row for some in self.rows.values() for row in some]
+        extent = extent_of([row["x"] / self.per_m for row in points], [row["y"] / self.per_m for row in points], width)
+        axes = _axes(extent, self.unit, self.per_m)
+        layers = [layer for name in self.rows for layer in _layers(name, axes, self.names, inks)]
+        chart = alt.layer(*layers).properties(width=extent.width, height=extent.height, description=self.description)
+        return finished(chart, self.rows, inks)
 
 
 def path_chart(paths: Sequence[DrawnPath], mark: Mark | None, shade: Shade, width: int) -> Document:
@@ -142,32 +181,18 @@ def path_chart(paths: Sequence[DrawnPath], mark: Mark | None, shade: Shade, widt
     shade, width
         Light or dark inks, and the width of the chart in pixels.
     """
-    inks = INKS[shade]
-    rows: list[dict[str, Any]] = [
-        {"x": path.x_m[i], "y": path.y_m[i], "i": i, "by": path.name} for path in paths for i in thinned(len(path.x_m))
-    ]
-    xs, ys = [row["x"] for row in rows], [row["y"] for row in rows]
-    if mark is not None:
-        xs, ys = [*xs, mark.x_m], [*ys, mark.y_m]
-    extent = extent_of(xs, ys, width)
-    axes = _axes(extent, "m", 1.0)
     names = [path.name for path in paths]
-    lines = (
-        alt.Chart(alt.InlineData(values=rows))
-        .mark_line(color=inks.ink, strokeWidth=1.6)
-        .encode(
-            x=axes[0],
-            y=axes[1],
-            order="i:Q",
-            detail="by:N",
-            strokeDash=alt.StrokeDash("by:N", scale=_dashes(names), legend=_legend("stroke", inks)),
-        )
-    )
-    start = alt.Chart(alt.InlineData(values=[{"x": 0.0, "y": 0.0, "said": "start"}]))
-    dot = start.mark_point(color=inks.ink, filled=True, opacity=1, size=60).encode(x=axes[0], y=axes[1])
-    word = start.mark_text(color=inks.soft, dy=14, font=FONT, fontSize=12, text="start").encode(x=axes[0], y=axes[1])
-    chart = alt.layer(lines, *_mark_layers(mark, axes, inks, 1.0), dot, word)
-    return _finished(chart, extent, inks, f"Path of the run by {' and by '.join(names)}, with the closure mark.")
+    rows: Rows = {
+        "paths": [
+            {"x": path.x_m[i], "y": path.y_m[i], "i": i, "by": path.name}
+            for path in paths
+            for i in thinned(len(path.x_m))
+        ],
+        **_mark_rows(mark, 1.0),
+        "start": [{"x": 0.0, "y": 0.0}],
+    }
+    description = f"Path of the run by {' and by '.join(names)}, with the closure mark."
+    return _Drawing(rows, names, "m", 1.0, description).document(shade, width)
 
 
 def end_chart(paths: Sequence[DrawnPath], mark: Mark, shade: Shade, width: int) -> Document:
@@ -175,28 +200,12 @@ def end_chart(paths: Sequence[DrawnPath], mark: Mark, shade: Shade, width: int) 
 
     The closure mark is the origin; the axes keep the directions of the start pose.
     """
-    inks = INKS[shade]
-    names = [path.name for path in paths]
-    rows: list[dict[str, Any]] = []
+    around = tuple((x - mark.x_m, y - mark.y_m) for x, y in mark.ellipse_m)
+    ends = []
     for path in paths:
-        x_m, y_m = path.x_m[-1] - mark.x_m, path.y_m[-1] - mark.y_m
-        said = f"{decimals(1000.0 * math.hypot(x_m, y_m), 1)} mm from the mark"
-        rows.append({"x": 1000.0 * x_m, "y": 1000.0 * y_m, "by": path.name, "said": said})
-    around = [(px - mark.x_m, py - mark.y_m) for px, py in mark.ellipse_m]
-    at_origin = Mark(0.0, 0.0, tuple(around))
-    xs = [row["x"] / 1000.0 for row in rows] + [0.0] + [px for px, _ in around]
-    ys = [row["y"] / 1000.0 for row in rows] + [0.0] + [py for _, py in around]
-    extent = extent_of(xs, ys, width)
-    axes = _axes(extent, "mm", 1000.0)
-    ends = (
-        alt.Chart(alt.InlineData(values=rows))
-        .mark_point(color=inks.ink, fill=inks.ink, opacity=1, size=110)
-        .encode(
-            x=axes[0],
-            y=axes[1],
-            shape=alt.Shape("by:N", scale=_shapes(names), legend=_legend("symbol", inks)),
-            tooltip=[alt.Tooltip("by:N", title="by"), alt.Tooltip("said:N", title="end")],
-        )
-    )
-    chart = alt.layer(*_mark_layers(at_origin, axes, inks, 1000.0), ends)
-    return _finished(chart, extent, inks, "End of the run against the closure mark and its 95 % ellipse.")
+        x_mm, y_mm = 1000.0 * (path.x_m[-1] - mark.x_m), 1000.0 * (path.y_m[-1] - mark.y_m)
+        said = f"{decimals(math.hypot(x_mm, y_mm), 1)} mm from the mark"
+        ends.append({"x": x_mm, "y": y_mm, "by": path.name, "said": said})
+    rows: Rows = {**_mark_rows(Mark(0.0, 0.0, around), 1000.0), "ends": ends}
+    description = "End of the run against the closure mark and its 95 % ellipse."
+    return _Drawing(rows, [path.name for path in paths], "mm", 1000.0, description).document(shade, width)

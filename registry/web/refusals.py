@@ -20,6 +20,7 @@ from registry.errors import (
     TooLarge,
     Unready,
 )
+from registry.web.current import forget_person
 from registry.web.policy import guarded
 
 STATUS: dict[type[Refusal], HTTPStatus] = {
@@ -84,5 +85,7 @@ def answer(error: Exception) -> BaseResponse:
 
 
 def _page(status: HTTPStatus, detail: str) -> Response:
+    if status >= HTTPStatus.INTERNAL_SERVER_ERROR:
+        forget_person()
     title = TITLES.get(status, "That did not work")
     return guarded(make_response(render_template("refusal.html", title=title, detail=detail), status))

@@ -8,6 +8,7 @@ from flask import Blueprint, Response, abort, flash, jsonify, make_response, red
 from werkzeug.wrappers import Response as BaseResponse
 
 from registry.domain.alert import ALERT_KIND_WORDS
+from registry.domain.calibration import Calibration
 from registry.domain.cautions import ADOPTION_CAUTIONS, DRIVE_CAUTIONS
 from registry.domain.maintenance import MAINTENANCE_WORDS
 from registry.domain.tolerance import QUANTITY_WORDS
@@ -57,6 +58,11 @@ def past_of(c: Connection, vehicle_id: str) -> VehiclePast:
     )
 
 
+def never_in_force(calibration: Calibration) -> bool:
+    """Whether a calibration was a proposal that a later one replaced: on the record, but nothing ever drove on it."""
+    return calibration.standing == "superseded" and calibration.in_force_from is None
+
+
 def doors(pages: Blueprint) -> None:
     """Put the page of a vehicle and what can be done there on the blueprint."""
     pages.add_url_rule("/vehicles/<vehicle_id>", "vehicle", _vehicle)
@@ -96,7 +102,9 @@ def _page(vehicle_id: str, forms: Forms) -> str:
         histories=histories,
         numbers_table=number_rows(histories),
         value_texts=value_texts,
-        calibrations=list(reversed(past.calibrations)),
+        calibrations=past.calibrations,
+        kept=[one for one in reversed(past.calibrations) if not never_in_force(one)],
+        replaced=[one for one in reversed(past.calibrations) if never_in_force(one)],
         in_force=in_force,
         decisions=[decision_on(one, past.calibrations) for one in proposals],
         in_force_decision=None if in_force is None else decision_on(in_force, past.calibrations),

@@ -166,6 +166,22 @@ def test_charts_follow_the_shade_and_the_width_of_the_screen(browser: Browser, a
         watched.is_quiet()
 
 
+def test_values_show_where_the_pointer_rests_on_a_chart(browser: Browser, address: str, yard: Yard) -> None:
+    with context_of(browser, 1440, "light") as context:
+        watched = Watched(context.new_page(), address)
+        watched.sign_in("Rea")
+        page = watched.open("/vehicles/tub-7")
+        watched.charts_drawn(4)
+        canvas = page.locator("[data-drawn] canvas").first
+        box = canvas.bounding_box()
+        assert box is not None
+        tip = page.locator("#vg-tooltip-element.visible")
+        # Six tenths of the way is under calibration 2, above its estimates and within its corridor.
+        canvas.hover(position={"x": 0.6 * box["width"], "y": 0.25 * box["height"]})
+        expect(tip).to_contain_text("calibration 2, tolerance")
+        watched.is_quiet()
+
+
 def test_an_alert_is_acknowledged_in_the_browser(
     browser: Browser, address: str, yard: Yard, services: Services
 ) -> None:

@@ -7,6 +7,8 @@ from dataclasses import replace
 from datetime import UTC, datetime, timedelta
 from typing import Any
 
+import altair as alt
+import jsonschema
 import pytest
 
 from registry.domain.calibration import Calibration, CalibrationResult, InForce, Observed
@@ -151,6 +153,24 @@ def test_a_chart_holds_corridor_band_estimate_adoptions_and_maintenance() -> Non
     assert [row["said"] for row in rows_of(document, dashed[0])] == ["collision, left"]
 
 
+def test_a_value_that_held_for_an_hour_does_not_press_the_chart_into_a_line() -> None:
+    ruler = calibration(9, replace(VALUES, width_m=0.3))
+    brief = replace(entry(0, 9, 0), in_force_from=T0 - timedelta(hours=1))
+    past = replace(PAST, calibrations=[*PAST.calibrations, ruler], in_force=[brief, *PAST.in_force])
+    history = history_of("width", past)
+    assert [one.number for one in history.corridors] == [9, 1, 2]
+    assert history.extent()[0] == pytest.approx(620 * 0.985)
+    alone = history_of("width", replace(past, evaluations=[], in_force=[brief], now=T0))
+    assert alone.extent() == pytest.approx((300 * 0.985, 300 * 1.015))
+
+
+def test_numbers_of_calibrations_adopted_close_together_stand_in_rows_of_their_own() -> None:
+    close = replace(PAST, in_force=[entry(1, 1, 0), entry(2, 2, 1), entry(3, 1, 20)])
+    document = history_chart(history_of("width", close), "light", 640)
+    rows = [[row["label"] for row in rows_of(document, layer)] for layer in layers_with(document, "text")]
+    assert rows == [["no. 1", "no. 1"], ["no. 2"]]
+
+
 def test_times_on_a_chart_are_utc() -> None:
     document = history_chart(history_of("width", PAST), "light", 640)
     assert {layer["encoding"]["x"]["scale"]["type"] for layer in document["layer"]} == {"utc"}
@@ -195,6 +215,7 @@ def test_a_chart_takes_the_width_of_its_page_within_reason() -> None:
 def test_a_chart_is_plain_json_and_can_be_drawn_as_a_picture() -> None:
     document = history_chart(history_of("width", PAST), "light", 640)
     json.dumps(document, allow_nan=False)
+    jsonschema.validate(document, alt.load_schema())
     picture = drawing.picture(document)
     assert picture.startswith("<svg")
     assert "no. 2" in picture

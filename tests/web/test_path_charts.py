@@ -2,8 +2,9 @@ from __future__ import annotations
 
 import json
 import math
-from typing import Any
 
+import altair as alt
+import jsonschema
 import numpy as np
 import pytest
 
@@ -14,10 +15,6 @@ from registry.web.run import ELLIPSE_FACTOR, ellipse
 OLD = DrawnPath("in force when driven (number 2)", [0.0, 5.0, 10.02], [0.0, 0.05, 0.16])
 NEW = DrawnPath("newest fit (proposed, number 3)", [0.0, 5.0, 9.99], [0.0, 0.01, 0.02])
 MARK = Mark(9.988, 0.015, ((9.99, 0.015), (9.988, 0.02), (9.986, 0.015), (9.99, 0.015)))
-
-
-def rows_with(document: dict[str, Any], field: str) -> list[dict[str, Any]]:
-    return next(rows for rows in document["datasets"].values() if field in rows[0])
 
 
 def test_one_pixel_is_as_long_ahead_as_to_the_side() -> None:
@@ -52,7 +49,7 @@ def test_a_path_chart_shows_the_mark_even_when_it_lies_off_the_path() -> None:
 
 def test_the_end_is_told_in_millimetres_from_the_mark() -> None:
     document = end_chart([OLD, NEW], MARK, "light", 480)
-    ends = rows_with(document, "said")
+    ends = document["datasets"]["ends"]
     assert [(row["x"], row["y"]) for row in ends] == [
         pytest.approx((32.0, 145.0)),
         pytest.approx((2.0, 5.0)),
@@ -63,6 +60,7 @@ def test_the_end_is_told_in_millimetres_from_the_mark() -> None:
 def test_charts_of_a_run_are_plain_json_and_can_be_drawn_as_pictures() -> None:
     for document in (path_chart([OLD, NEW], MARK, "dark", 390), end_chart([OLD, NEW], MARK, "light", 390)):
         json.dumps(document, allow_nan=False)
+        jsonschema.validate(document, alt.load_schema())
         assert "number 3" in drawing.picture(document)
 
 

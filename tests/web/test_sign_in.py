@@ -2,15 +2,17 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from datetime import timedelta
+from pathlib import Path
 
 import pytest
 
+from registry.app import create_app
 from registry.domain.person import Person
 from registry.services import Services
 from registry.storage import people
 from registry.web.policy import CONTENT_POLICY
 from registry.web.sign_in import SignedIn
-from tests.conftest import StandingClock
+from tests.conftest import StandingClock, services_in
 from tests.web.conftest import Visitor
 from tests.web.yard import PASSWORD, Yard
 
@@ -140,3 +142,14 @@ def test_the_session_cookie_is_out_of_reach_of_scripts_and_of_other_sites(strang
 
 def test_a_vehicles_key_opens_no_page_and_a_session_no_door_of_the_api(visitor: Callable[[str], Visitor]) -> None:
     assert visitor("Kim").get("/api/v1/vehicles").status_code == 401
+
+
+def test_a_database_that_cannot_be_reached_is_said_on_a_page_even_to_a_session(
+    tmp_path: Path, clock: StandingClock
+) -> None:
+    lost = Visitor(create_app(services_in(tmp_path / "nowhere" / "at all", clock)).test_client())
+    with lost.client.session_transaction() as session:
+        session["_user_id"] = SignedIn(Person("Abel", "approver", "a hash", clock())).get_id()
+    response = lost.get("/")
+    assert response.status_code == 503
+    assert "<h1>Not ready</h1>" in response.get_data(as_text=True)
