@@ -95,6 +95,7 @@ def _page(forms: dict[str, NoteForm]) -> str:
         quantity_words=QUANTITY_WORDS,
         standing_words=STANDING_WORDS,
         forms=forms,
+        sent=next(iter(forms.values()), None),
         empty_form=note_form,
     )
 

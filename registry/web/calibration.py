@@ -43,6 +43,7 @@ def _page(calibration_id: str, adopting: AdoptionForm | None, withdrawing: Withd
         runs=behind,
         loaded=loaded,
         based_on=based_on,
+        sent=adopting or withdrawing,
         adoption_cautions=ADOPTION_CAUTIONS,
     )
 

@@ -64,10 +64,10 @@ def drawn_of(paths: RunPaths) -> tuple[list[DrawnPath], Mark | None]:
 
 
 def _run(run_id: str) -> str:
-    return _page(run_id, ReasonForm())
+    return _page(run_id, None)
 
 
-def _page(run_id: str, form: ReasonForm) -> str:
+def _page(run_id: str, sent: ReasonForm | None) -> str:
     paths = run_paths(services(), run_id)
     with services().read() as c:
         version = vehicles.current(c, paths.run.vehicle_id)
@@ -98,7 +98,8 @@ def _page(run_id: str, form: ReasonForm) -> str:
         states=states,
         used_in=used_in,
         noted=[(name, text) for name, text in noted if text],
-        form=form,
+        form=sent or ReasonForm(),
+        sent=sent,
     )
 
 

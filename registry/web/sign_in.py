@@ -167,7 +167,7 @@ def _sign_in(tries: Tries) -> Callable[[], BaseResponse]:
 
 
 def _sign_in_page(form: SignInForm, status: int = 200) -> Response:
-    return make_response(render_template("sign_in.html", form=form), status)
+    return make_response(render_template("sign_in.html", form=form, sent=form if status != 200 else None), status)
 
 
 def _sign_out() -> BaseResponse:

@@ -20,7 +20,7 @@ from registry.web import drawing
 from registry.web.charts import Document, Shade, history_chart
 from registry.web.current import actor, services
 from registry.web.decisions import decision_on, value_texts
-from registry.web.forms import BaselineForm, EnteredForm, MaintenanceForm, NoteForm
+from registry.web.forms import BaselineForm, EnteredForm, MaintenanceForm, NoteForm, Posted
 from registry.web.history import LINES, Line, VehiclePast, history_of, number_rows
 from registry.web.policy import PICTURE_POLICY
 from registry.web.standing import of_vehicle
@@ -32,11 +32,12 @@ MOST_ROWS = 400
 
 @dataclass
 class Forms:
-    """The forms of the page: empty, or as they came back."""
+    """The forms of the page: empty, but for the one that came back."""
 
     baseline: BaselineForm = field(default_factory=BaselineForm)
     entered: EnteredForm = field(default_factory=EnteredForm)
     maintenance: MaintenanceForm = field(default_factory=MaintenanceForm)
+    sent: Posted | None = None
 
 
 def past_of(c: Connection, vehicle_id: str) -> VehiclePast:
@@ -114,6 +115,7 @@ def _page(vehicle_id: str, forms: Forms) -> str:
         boots=boot_page,
         alerts=open_alerts,
         forms=forms,
+        sent=forms.sent,
         note_form=lambda alert_id: NoteForm(key=f"note-{alert_id}"),
         kind_words=ALERT_KIND_WORDS,
         quantity_words=QUANTITY_WORDS,
@@ -127,7 +129,7 @@ def _propose_baseline(vehicle_id: str) -> BaseResponse | tuple[str, int]:
     form = BaselineForm(request.form)
     made = form.attempt(lambda: baseline.propose_baseline(services(), actor(), vehicle_id, None, form.note.data))
     if made is None:
-        return _page(vehicle_id, Forms(baseline=form)), 422
+        return _page(vehicle_id, Forms(baseline=form, sent=form)), 422
     flash(f"Calibration {made.number} is proposed. Look at its numbers, then decide.")
     return redirect(url_for("web.calibration", calibration_id=made.calibration_id), 303)
 
@@ -140,7 +142,7 @@ def _propose_entered(vehicle_id: str) -> BaseResponse | tuple[str, int]:
         )
     )
     if made is None:
-        return _page(vehicle_id, Forms(entered=form)), 422
+        return _page(vehicle_id, Forms(entered=form, sent=form)), 422
     flash(f"Calibration {made.number} is proposed. An approver decides.")
     return redirect(url_for("web.calibration", calibration_id=made.calibration_id), 303)
 
@@ -153,7 +155,7 @@ def _record_maintenance(vehicle_id: str) -> BaseResponse | tuple[str, int]:
         )
     )
     if made is None:
-        return _page(vehicle_id, Forms(maintenance=form)), 422
+        return _page(vehicle_id, Forms(maintenance=form, sent=form)), 422
     what = MAINTENANCE_WORDS[made.kind]
     rest = " Its parameters are questioned until a new calibration." if made.ends_window else ""
     flash(f"Recorded: {what}.{rest}")

@@ -140,6 +140,7 @@ def test_adopting_twice_says_what_holds(visitor: Visits, yard: Yard) -> None:
     assert abel.client.post(f"{path}/adoption", data=fields).status_code == 303
     again = abel.client.post(f"{path}/adoption", data=fields)
     assert again.status_code == 422
+    assert "calibration 3 is in force already" in flat(again.get_data(as_text=True))
 
 
 def test_withdrawing_can_bring_an_earlier_calibration_back(visitor: Visits, yard: Yard, services: Services) -> None:
@@ -228,6 +229,24 @@ def test_an_alert_is_acknowledged_with_a_note_and_stays_while_it_holds(
     assert "tracks look worn" in text
     with services.read() as c:
         assert alerts.by_id(c, yard.alert.alert_id).standing == "acknowledged"
+
+
+def test_acknowledging_twice_says_what_stands(visitor: Visits, yard: Yard) -> None:
+    tove, path = visitor("Tove"), f"/alerts/{yard.alert.alert_id}/acknowledgement"
+    fields = {"csrf_token": tove.token("/alerts"), "note": "seen"}
+    assert tove.client.post(path, data=fields).status_code == 303
+    again = tove.client.post(path, data=fields)
+    assert again.status_code == 422
+    assert '<div class="wrong" role="alert">' in again.get_data(as_text=True)
+
+
+def test_a_form_sent_after_the_session_ended_leads_to_the_sign_in_page(visitor: Visits) -> None:
+    tove = visitor("Tove")
+    token = tove.token("/alerts")
+    with tove.client.session_transaction() as session:
+        del session["_user_id"]
+    response = tove.client.post("/vehicles/tub-7/baseline", data={"csrf_token": token})
+    assert (response.status_code, response.location) == (303, "/sign-in")
 
 
 def test_acknowledging_needs_a_note(visitor: Visits, yard: Yard, services: Services) -> None:
