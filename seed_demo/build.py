@@ -73,13 +73,14 @@ def build_demo(
     present = services.now()
     calendar = Calendar(present.date(), days)
     planned = _planned(fleet, calendar, present.timestamp())
-    name, password = deeds.hire(_at(services, calendar.at(0, 0)))
     with ExitStack() as stack:
         take: Take = drive
         make_pass: MakePass = pass_here
         if second_processes:
             take = stack.enter_context(simulated_ahead(planned))
             make_pass = stack.enter_context(passes_shared(services.settings))
+        # Passwords take their time to hash; meanwhile the other processes start and the first runs are simulated.
+        name, password = deeds.hire(_at(services, calendar.at(0, 0)))
         memory = deeds.Memory()
         diary = [one for one in entries(fleet, planned, (take, make_pass), calendar, memory) if one.at <= present]
         _live(services, diary, progress)
