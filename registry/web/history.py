@@ -164,15 +164,23 @@ def _told(line: Line, evaluation: Evaluation) -> tuple[float, float] | None:
     return value, result.coverage_factor * (left_u if line == "left" else right_u) * value
 
 
-def points_of(line: Line, evaluations: Sequence[Evaluation]) -> tuple[Point, ...]:
-    """The evaluations as points; a stretch ends where the runs cannot tell and where another calibration is judged."""
+def points_of(
+    line: Line, evaluations: Sequence[Evaluation], maintenance: Sequence[Maintenance] = ()
+) -> tuple[Point, ...]:
+    """The evaluations as points, oldest first.
+
+    A stretch ends where the runs cannot tell, where another calibration is judged, and at work after which runs are no
+    longer compared with those before.
+    """
+    ends = [work.done_at for work in maintenance if work.ends_window]
     points: list[Point] = []
-    stretch, against = 0, None
+    stretch, before = 0, None
     for evaluation in evaluations:
         told = _told(line, evaluation)
-        if told is None or evaluation.result.against != against:
+        window = (evaluation.result.against, sum(end <= evaluation.as_of for end in ends))
+        if told is None or window != before:
             stretch += 1
-        against = evaluation.result.against
+        before = window
         value, expanded = told if told is not None else (None, None)
         points.append(Point(evaluation.as_of, value, expanded, evaluation.result.runs_used, stretch))
     return tuple(points)
@@ -239,4 +247,4 @@ def _written(point: Point) -> str:
 
 def history_of(line: Line, past: VehiclePast) -> History:
     """One line of a vehicle's history."""
-    return History(line, points_of(line, past.evaluations), corridors_of(line, past), events_of(past))
+    return History(line, points_of(line, past.evaluations, past.maintenance), corridors_of(line, past), events_of(past))

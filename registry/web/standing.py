@@ -9,6 +9,7 @@ from datetime import datetime
 from registry.domain.alert import Alert
 from registry.domain.calibration import InForce
 from registry.domain.evaluation import Evaluation
+from registry.domain.maintenance import Maintenance
 from registry.domain.next_step import NextStep, next_step
 from registry.domain.tolerance import QUANTITIES, Tolerance
 from registry.domain.vehicle import VehicleVersion
@@ -52,7 +53,11 @@ class Standing:
 
 
 def strips_of(
-    tolerance: Tolerance, width_m: float, in_force: InForce | None, recent: Sequence[Evaluation]
+    tolerance: Tolerance,
+    width_m: float,
+    in_force: InForce | None,
+    recent: Sequence[Evaluation],
+    work: Maintenance | None = None,
 ) -> tuple[Strip, ...]:
     """The three strips of a vehicle.
 
@@ -61,8 +66,16 @@ def strips_of(
     recent
         Its last evaluations, newest first. Only those against the calibration in force are shown: what was said
         against another one is no statement about this one.
+    work
+        Maintenance that ended the window since: what was said before it is left out too.
     """
-    same = [one for one in recent if in_force is not None and one.result.against == in_force.calibration_id]
+    same = [
+        one
+        for one in recent
+        if in_force is not None
+        and one.result.against == in_force.calibration_id
+        and (work is None or one.as_of >= work.done_at)
+    ]
     # The latest evaluation may be of before the adoption: then this calibration has not been looked at yet.
     current = same[0] if same and same[0] is recent[0] else None
     coverage = (current.result.coverage_factor if current is not None else None) or NORMAL_COVERAGE
@@ -91,14 +104,15 @@ def of_fleet(c: Connection) -> list[Standing]:
         vehicle_id, statement = version.vehicle_id, version.statement
         held, sheet = _held(in_force.get(vehicle_id)), sheets.get(vehicle_id)
         questioned = sheet is not None and sheet.condition == "questioned"
+        work = boot.awaiting(c, vehicle_id) if questioned else None
         step = next_step(
             open_alerts.get(vehicle_id, ()),
             calibrations.open_proposals(c, vehicle_id),
             None if held is None or sheet is None else sheet.condition,
-            boot.awaiting(c, vehicle_id) if questioned else None,
+            work,
         )
         width_m = parameters.get(vehicle_id, statement.nominal).width_m
-        strips = strips_of(statement.tolerance, width_m, held, recent.get(vehicle_id, ()))
+        strips = strips_of(statement.tolerance, width_m, held, recent.get(vehicle_id, ()), work)
         standings.append(Standing(version, held, None if sheet is None else sheet.condition, step, strips))
     return standings
 
@@ -107,15 +121,16 @@ def of_vehicle(c: Connection, version: VehicleVersion, now: datetime) -> Standin
     """One vehicle."""
     vehicle_id, statement = version.vehicle_id, version.statement
     held, sheet = _held(calibrations.in_force(c, vehicle_id, now)), boots.sheet(c, vehicle_id)
+    work = boot.awaiting(c, vehicle_id)
     step = next_step(
         alerts.open_for(c, vehicle_id),
         calibrations.open_proposals(c, vehicle_id),
         None if held is None or sheet is None else sheet.condition,
-        boot.awaiting(c, vehicle_id),
+        work,
     )
     width_m = statement.nominal.width_m
     if held is not None and held.calibration_id is not None:
         width_m = calibrations.by_id(c, held.calibration_id).result.parameters.width_m
     recent = evaluations.page(c, vehicle_id, TRAIL_LENGTH + 1, None).items
-    strips = strips_of(statement.tolerance, width_m, held, recent)
+    strips = strips_of(statement.tolerance, width_m, held, recent, work)
     return Standing(version, held, None if sheet is None else sheet.condition, step, strips)

@@ -113,6 +113,14 @@ def test_lines_are_broken_where_the_runs_cannot_tell_and_where_another_calibrati
     assert stretches[-1] != stretches[-2]
 
 
+def test_lines_are_broken_at_work_after_which_runs_are_no_longer_compared() -> None:
+    work = Maintenance("m2", "tub-7", T0 + timedelta(days=2, hours=1), "part_fitted", None, None, True, T0, "Tove")
+    broken = [point.stretch for point in points_of("width", PAST.evaluations[:3], [work])]
+    assert broken[0] == broken[1] != broken[2]
+    whole = [point.stretch for point in points_of("width", PAST.evaluations[:3], [replace(work, ends_window=False)])]
+    assert whole[0] == whole[1] == whole[2]
+
+
 def test_the_band_is_the_coverage_factor_times_u() -> None:
     point = points_of("width", PAST.evaluations)[0]
     assert point.value == pytest.approx(620 * 1.002)
