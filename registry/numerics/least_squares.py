@@ -2,7 +2,9 @@ r"""Non-linear least squares: damped Gauss-Newton steps by QR, with weights that
 
 A step solves :math:`\min_c \|r - Jc\|` for the whitened residual r and the whitened derivative J of what is predicted.
 The columns are scaled to length one and the triangle comes from an orthogonal factorisation: normal equations would
-square the condition number and lose half of the digits. A step that does not lower the sum of squares is halved.
+square the condition number and lose half of the digits. A step that does not lower the sum of squares is halved. Where a
+parameter acts by its square, steps overshoot and would swing for ever: after a while, no parameter goes back by more
+than half of what it went forth.
 
 The covariance of the parameters, for residuals of unit variance, is the product of the inverse triangle with its own
 transpose.
@@ -22,6 +24,8 @@ import numpy as np
 from registry.numerics.arrays import Float
 
 _HALVINGS = 30
+#: Steps after which swings are halved; what converges as it should is done by then.
+_SWINGS = 20
 #: Rounding of a sum of squares: a relative rise below this is none.
 _NO_RISE = 1e-11
 
@@ -130,8 +134,11 @@ def gauss_newton(
     at = np.array(start, dtype=np.float64)
     residual = model.residual(at)
     solution = solve(model.jacobian(at), residual)
+    change = np.zeros_like(at)
     for iteration in range(1, iterations + 1):
-        at, change = _descend(model, at, residual, np.clip(solution.change, -step_limit, step_limit))
+        back = (solution.change * change < 0.0) & (iteration > _SWINGS)
+        limit = np.where(back, 0.5 * np.abs(change), step_limit)
+        at, change = _descend(model, at, residual, np.clip(solution.change, -limit, limit))
         still = bool(np.all(np.abs(change) <= tolerance * solution.u))
         settled = model.settle(at, solution, still)
         residual = model.residual(at)

@@ -168,7 +168,7 @@ class Session:
 def session(
     seed: int,
     rolling_noise_m: float = 0.49e-6,
-    rate_hz: float = 20.0,
+    rate_hz: float = 10.0,
     repeats: int = 1,
     spread: tuple[float, float, float] = (0.0, 0.0, 0.0),
 ) -> Session:
@@ -181,7 +181,8 @@ def session(
     rolling_noise_m : float
         Variance per metre rolled, by default (0.7 mm)^2 on a metre.
     rate_hz : float
-        Samples a second.
+        Samples a second. Both sides of a leg share one profile, so that its curvature is constant and thin sampling
+        loses nothing.
     repeats : int
         How often the twelve runs are driven.
     spread : tuple of float

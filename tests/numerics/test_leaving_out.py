@@ -5,8 +5,8 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from registry.numerics.stacks import CountsStack
 from registry.numerics.fit import Fit, fit
+from registry.numerics.stacks import CountsStack
 
 from .drives import Truth, drive, read_ends, session, square, straight
 
