@@ -99,7 +99,9 @@ def test_one_run_is_one_run() -> None:
     assert message_of([OPEN] * 3, "cannot_tell", 1, confirmed=True).startswith("1 run, and none")
 
 
-@pytest.mark.parametrize(("value", "words"), [(0.008, "+0.80 %"), (-0.00004, "0.00 %"), (-0.0012, "-0.12 %"), (0.1, "+10.00 %")])
+@pytest.mark.parametrize(
+    ("value", "words"), [(0.008, "+0.80 %"), (-0.00004, "0.00 %"), (-0.0012, "-0.12 %"), (0.1, "+10.00 %")]
+)
 def test_relative_values_are_signed_percent(value: float, words: str) -> None:
     assert percent(value) == words
 
