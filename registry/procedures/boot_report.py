@@ -138,10 +138,11 @@ def _raise_or_clear(c: Connection, services: Services, boot: Boot, loaded: _Load
         return
     entry = calibrations.in_force(c, boot.vehicle_id)
     due = None if entry is None or entry.calibration_id is None else calibrations.by_id(c, entry.calibration_id)
+    name = vehicles.current(c, boot.vehicle_id).statement.name
     content = AlertContent(
         kind="boot_mismatch",
         quantity=None,
-        message=f"Booted at {utc_text(boot.booted_at.replace(microsecond=0))} on {loaded.wrong}.",
+        message=f"{name}: booted on {loaded.wrong} ({boot.booted_at:%Y-%m-%d %H:%M} UTC)",
         consequence=_consequence(loaded.calibration, due),
         advice="Nothing is in force: put a calibration into force, then let the vehicle load it."
         if due is None

@@ -171,6 +171,15 @@ def open_proposals(c: Connection, vehicle_id: str, kind: Kind | None = None) -> 
     return _build(c, c.execute(statement.order_by(calibrations.c.number)).all())
 
 
+def all_open_proposals(c: Connection) -> dict[str, list[Calibration]]:
+    """The calibrations of every vehicle that are still proposed, by number."""
+    statement = _CALIBRATIONS.where(calibration_standings.c.standing == "proposed").order_by(calibrations.c.number)
+    proposed: dict[str, list[Calibration]] = {}
+    for one in _build(c, c.execute(statement).all()):
+        proposed.setdefault(one.vehicle_id, []).append(one)
+    return proposed
+
+
 def withdrawn_numbers(c: Connection, vehicle_id: str, until: datetime | None = None) -> tuple[int, ...]:
     """Numbers of a vehicle's calibrations that are withdrawn, or had been by ``until``, ascending."""
     standings = calibration_standings

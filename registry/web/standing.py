@@ -99,6 +99,7 @@ def of_fleet(c: Connection) -> list[Standing]:
         open_alerts.setdefault(alert.vehicle_id or "", []).append(alert)
     in_force, parameters = calibrations.all_in_force(c), parameters_in_force(c)
     recent, sheets = evaluations.recent_all(c, TRAIL_LENGTH + 1), boots.all_sheets(c)
+    proposed = calibrations.all_open_proposals(c)
     standings = []
     for version in vehicles.all_current(c):
         vehicle_id, statement = version.vehicle_id, version.statement
@@ -107,7 +108,7 @@ def of_fleet(c: Connection) -> list[Standing]:
         work = boot.awaiting(c, vehicle_id) if questioned else None
         step = next_step(
             open_alerts.get(vehicle_id, ()),
-            calibrations.open_proposals(c, vehicle_id),
+            proposed.get(vehicle_id, ()),
             None if held is None or sheet is None else sheet.condition,
             work,
         )
