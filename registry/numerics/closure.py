@@ -11,6 +11,7 @@ Headings are compared modulo a full turn unless the whole turns were counted.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 
@@ -46,6 +47,16 @@ class Closures:
 
     def __len__(self) -> int:
         return int(self.measured.shape[0])
+
+    @cached_property
+    def own_covariance(self) -> Float:
+        """Covariances (n, 4, 4) of the closures by themselves: unit on absent components."""
+        return np.asarray(np.where(self.present, self.variance, 1.0)[:, :, None] * np.eye(4))
+
+    @cached_property
+    def count(self) -> Float:
+        """Measured components (n,) of every run."""
+        return np.asarray(self.present.sum(axis=1), dtype=np.float64)
 
     def take(self, which: Bool) -> Closures:
         """The closures of some of the runs."""

@@ -33,7 +33,7 @@ from registry.numerics.arrays import Bool, Float
 from registry.numerics.closure import Closures, misclosure
 from registry.numerics.conformity import coverage_factor
 from registry.numerics.least_squares import gauss_newton, solve
-from registry.numerics.linearised import linearise, normal_score, whitener
+from registry.numerics.linearised import normal_score
 from registry.numerics.misclosures import WEAK_SD, Misclosures, OutsideMapsError
 from registry.numerics.observability import relative_from_quantities, to_parameters, to_quantities
 from registry.numerics.stacks import Stack
@@ -234,27 +234,6 @@ def _influence(rows: Float, white: Float, free: Bool) -> tuple[Float, Float]:
     change[:, free] = -(rest @ own.transpose(0, 2, 1) @ white[:, :, None])[:, :, 0]
     variance[:, free] = np.einsum("nii->ni", rest)
     return change, variance
-
-
-def scores_against(
-    stack: Stack, closures: Closures, parameters: Float, covariance: Float, rolling_noise_m: float
-) -> Float:
-    """Normal score (n,) of each run's distance from parameters known with a covariance: standard normal while they
-    hold.
-
-    Parameters
-    ----------
-    parameters : (3,) float
-        (k_L, k_R, W) in metres.
-    covariance : (3, 3) float
-        Of (ln tick factor, side ratio, ln width).
-    rolling_noise_m : float
-        Square metres per metre.
-    """
-    runs = linearise(stack, closures, to_quantities(parameters))
-    known = runs.j @ covariance @ runs.j.transpose(0, 2, 1)
-    white = np.einsum("nij,nj->ni", whitener(runs.own + rolling_noise_m * runs.noise + known), runs.e)
-    return normal_score((white**2).sum(axis=1), runs.count)
 
 
 def misclosures(stack: Stack, closures: Closures, parameters: Float) -> Float:

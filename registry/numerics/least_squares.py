@@ -2,8 +2,8 @@ r"""Non-linear least squares: damped Gauss-Newton steps by QR, with weights that
 
 A step solves :math:`\min_c \|r - Jc\|` for the whitened residual r and the whitened derivative J of what is predicted.
 The columns are scaled to length one and the triangle comes from an orthogonal factorisation: normal equations would
-square the condition number and lose half of the digits. A step that does not lower the sum of squares is halved. Where a
-parameter acts by its square, steps overshoot and would swing for ever: after a while, no parameter goes back by more
+square the condition number and lose half of the digits. A step that does not lower the sum of squares is halved. Where
+a parameter acts by its square, steps overshoot and would swing for ever: after a while, no parameter goes back by more
 than half of what it went forth.
 
 The covariance of the parameters, for residuals of unit variance, is the product of the inverse triangle with its own

@@ -70,13 +70,12 @@ def linearise(stack: Stack, closures: Closures, quantities: Float) -> Linearised
     prediction = stack.predict(parameters)
     rows = component_jacobian(prediction.pose) * closures.present[:, :, None]
     to_relative = relative_from_quantities(float(quantities[1]))
-    own = np.where(closures.present, closures.variance, 1.0)
     return Linearised(
         e=misclosure(closures, prediction.pose),
         j=rows @ (prediction.jacobian @ (parameters[:, None] * to_relative)),
         noise=np.asarray(rows @ prediction.noise @ rows.transpose(0, 2, 1)),
-        own=own[:, :, None] * np.eye(4),
-        count=closures.present.sum(axis=1).astype(np.float64),
+        own=closures.own_covariance,
+        count=closures.count,
     )
 
 

@@ -127,15 +127,19 @@ def at_levers(prediction: Prediction, levers_m: Float) -> Prediction:
 
 
 def _chebyshev(x: Float, order: int) -> tuple[Float, Float]:
-    """Chebyshev polynomials and their derivatives (order, ...) at x (...), by recurrence: valid a little outside [-1,
-    1] too.
+    """Chebyshev polynomials and their derivatives (order, ...) at x (...), valid a little outside [-1, 1] too.
+
+    One recurrence for those of the second kind gives both: :math:`T_k' = kU_{k-1}` and :math:`2T_k = U_k - U_{k-2}`.
     """
-    value = np.ones((order, *x.shape))
-    slope = np.zeros((order, *x.shape))
-    if order > 1:
-        value[1], slope[1] = x, 1.0
+    second = np.ones((max(order, 2), *x.shape))
     double = 2.0 * x
+    second[1] = double
     for degree in range(2, order):
-        value[degree] = double * value[degree - 1] - value[degree - 2]
-        slope[degree] = 2.0 * value[degree - 1] + double * slope[degree - 1] - slope[degree - 2]
+        np.multiply(double, second[degree - 1], out=second[degree])
+        second[degree] -= second[degree - 2]
+    value = np.ones((order, *x.shape))
+    value[1:2] = x
+    value[2:] = 0.5 * (second[2:order] - second[: max(order - 2, 0)])
+    slope = np.zeros((order, *x.shape))
+    slope[1:] = np.arange(1, order).reshape(-1, *[1] * x.ndim) * second[: order - 1]
     return value, slope

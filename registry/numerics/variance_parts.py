@@ -107,7 +107,7 @@ def _scores(at: Whitened, parts: tuple[Float, ...]) -> tuple[Float, Float]:
     white = [at.whitener @ part @ at.whitener.transpose(0, 2, 1) for part in parts]
     score = np.empty(len(parts))
     for index, part in enumerate(white):
-        quadratic = np.einsum("ni,nij,nj->n", residual, part, residual)
+        quadratic = np.einsum("ni,ni->n", residual, np.einsum("nij,nj->ni", part, residual))
         correction = np.einsum("nip,nip->n", uncertain, part @ uncertain)
         per_run = at.weight * (quadratic + correction) - np.einsum("nii->n", part)
         score[index] = 0.5 * float(per_run @ fits)

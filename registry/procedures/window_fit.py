@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import datetime
 
 import numpy as np
@@ -15,7 +15,7 @@ from registry.domain.vehicle import VehicleVersion
 from registry.numerics.arrays import Bool, Float
 from registry.numerics.closure_map import ClosureMap
 from registry.numerics.conformity import ACT_AT, probability_beyond
-from registry.numerics.fit import DEFAULT_ROLLING_NOISE_M, Fit, fit, misclosures, scores_against
+from registry.numerics.fit import DEFAULT_ROLLING_NOISE_M, Fit, fit, misclosures
 from registry.numerics.observability import (
     deviation,
     observed,
@@ -24,7 +24,7 @@ from registry.numerics.observability import (
     to_parameters,
     to_quantities,
 )
-from registry.numerics.recent import last_break
+from registry.numerics.recent import latest_state
 from registry.numerics.stacks import CountsStack, MapStack
 from registry.numerics.start_values import find_start
 from registry.procedures.calibration_results import (
@@ -96,26 +96,21 @@ def judge(
 
 
 def _fit(c: Connection, runs: tuple[Run, ...], calibration: Calibration) -> _Fitted:
-    """Fit the runs that belong to the vehicle's latest state, from their maps where these reach, else from the counts.
+    """Fit the runs that belong to the vehicle's latest state.
 
-    A robust fit stays with the majority, so that a change would stay unseen until most of the window was driven after
-    it.
-    Therefore runs from which on the calibration in force no longer fits are judged alone, when they tell anything.
+    After a change the runs before it only hide it, and under wear the mean of a window lags: the window is narrowed to
+    its latest state until its runs belong together, as long as they tell anything.
     """
-    evidence = Evidence(c, runs)
     reference = parameter_array(calibration.result.parameters)
-    covariance = quantity_covariance(np.array(calibration.result.covariance_relative), reference)
     noise = calibration.result.random_error_m_per_sqrt_m
     guess = DEFAULT_ROLLING_NOISE_M if noise is None else noise**2
-    stack: MapStack | CountsStack | None = evidence.map_stack(c)
-    if stack is None or not bool(stack.inside(reference).all()):
-        stack = evidence.counts_stack(c)
-    begin = last_break(scores_against(stack, evidence.closures, reference, covariance, guess))
-    if begin > 0:
-        latest = _fit_all(c, evidence.since(begin), reference, guess)
-        if latest.answer.status == "converged" and bool(np.any(latest.answer.u_quantities < _TELLS_SOMETHING)):
-            return latest
-    return _fit_all(c, evidence, reference, guess)
+    fitted = _fit_all(c, Evidence(c, runs), reference, guess)
+    while begin := latest_state(fitted.stack, fitted.evidence.closures, fitted.answer):
+        latest = _fit_all(c, fitted.evidence.since(begin), reference, guess)
+        if latest.answer.status != "converged" or not bool(np.any(latest.answer.u_quantities < _TELLS_SOMETHING)):
+            break
+        fitted = replace(latest, new_maps=fitted.new_maps | latest.new_maps)
+    return fitted
 
 
 def _fit_all(c: Connection, evidence: Evidence, reference: Float, guess: float) -> _Fitted:

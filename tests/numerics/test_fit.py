@@ -7,7 +7,7 @@ import pytest
 
 from registry.numerics.closure import Closures
 from registry.numerics.closure_map import fold
-from registry.numerics.fit import Fit, Hold, fit, misclosures, scores_against
+from registry.numerics.fit import Fit, Hold, fit, misclosures
 from registry.numerics.kinematics import end_pose
 from registry.numerics.observability import quantity_covariance, to_quantities
 from registry.numerics.stacks import CountsStack, MapStack
@@ -291,26 +291,3 @@ def test_a_mark_off_the_axle_gives_the_same_parameters() -> None:
     assert np.abs(apart / right.u_quantities).max() < 0.02
     wrong = fit(CountsStack(counts, np.zeros((len(runs), 2))), closures, truth.parameters * NEARBY)
     assert wrong.deviance > right.deviance + 50
-
-
-def test_runs_that_fit_known_parameters_have_standard_normal_scores() -> None:
-    scores = []
-    for seed in range(20):
-        given = session(seed)
-        stack = CountsStack(given.counts, given.levers_m)
-        truth = given.truth
-        scores.append(scores_against(stack, given.closures, truth.parameters, np.zeros((3, 3)), truth.rolling_noise_m))
-    pooled = np.concatenate(scores)
-    # Of 240 scores: a mean within 3 / sqrt(240), a deviation within 3 / sqrt(480).
-    assert abs(pooled.mean()) < 0.2
-    assert pooled.std() == pytest.approx(1.0, abs=0.15)
-
-
-def test_scores_count_how_well_the_parameters_themselves_are_known() -> None:
-    given = session(3)
-    stack = CountsStack(given.counts, given.levers_m)
-    off = given.truth.parameters * [1.004, 1.004, 1.0]
-    sure = scores_against(stack, given.closures, off, np.zeros((3, 3)), given.truth.rolling_noise_m)
-    unsure = scores_against(stack, given.closures, off, np.diag([0.004**2, 0, 0]), given.truth.rolling_noise_m)
-    assert sure[:3].min() > 2.5
-    assert unsure[:3].max() < 2.5
