@@ -14,7 +14,7 @@ from typing import Literal
 
 import numpy as np
 
-from registry.numerics.arrays import Float, Int
+from registry.numerics.arrays import Bool, Float, Int
 
 Side = Literal["left", "right"]
 
@@ -65,6 +65,11 @@ def increments(readings: Int, bits: int) -> Float:
     return np.asarray((((np.diff(readings) + half) & mask) - half).astype(np.float64))
 
 
+def impossible_steps(ticks: Float, time_s: Float, m_per_tick: float, max_speed_m_per_s: float) -> Bool:
+    """Which steps (n - 1,) of one side are faster than it can roll; one tick is allowed beside the speed."""
+    return np.asarray(np.maximum(np.abs(ticks) - 1.0, 0.0) * m_per_tick > max_speed_m_per_s * np.diff(time_s))
+
+
 def first_impossible_step(
     left_ticks: Float, right_ticks: Float, time_s: Float, m_per_tick: tuple[float, float], max_speed_m_per_s: float
 ) -> ImpossibleStep | None:
@@ -88,7 +93,7 @@ def first_impossible_step(
     interval = np.diff(time_s)
     found: list[ImpossibleStep] = []
     for side, ticks, factor in (("left", left_ticks, m_per_tick[0]), ("right", right_ticks, m_per_tick[1])):
-        beyond = np.maximum(np.abs(ticks) - 1.0, 0.0) * factor > max_speed_m_per_s * interval
+        beyond = impossible_steps(ticks, time_s, factor, max_speed_m_per_s)
         if beyond.any():
             index = int(np.argmax(beyond))
             speed = abs(float(ticks[index])) * factor / float(interval[index])
@@ -96,7 +101,7 @@ def first_impossible_step(
     return min(found, key=lambda step: step.sample, default=None)
 
 
-def other_readings(left: Int, right: Int, bits: int) -> Iterator[Reading]:
+def other_readings(left: Int, right: Int, bits: int, impossible: tuple[Bool, Bool]) -> Iterator[Reading]:
     """Mistakes that are made in practice, each with the increments it would give: the likeliest first.
 
     Parameters
@@ -105,12 +110,15 @@ def other_readings(left: Int, right: Int, bits: int) -> Iterator[Reading]:
         Counter readings as logged.
     bits : int
         Width of the counter as stated.
+    impossible : (n - 1,) bool, twice
+        Which steps of the left and of the right side are too fast, see `impossible_steps`.
     """
     a, b = increments(left, bits), increments(right, bits)
     for width in _COMMON_BITS:
         if width < bits and max(int(left.max()), int(right.max())) < 1 << width:
             yield Reading(f"counter of {width} bits, not {bits}", increments(left, width), increments(right, width))
-    yield Reading("counter started again from zero", _without_resets(left, a, bits), _without_resets(right, b, bits))
+    started = _without_resets(left, a, bits, impossible[0]), _without_resets(right, b, bits, impossible[1])
+    yield Reading("counter started again from zero", *started)
     yield Reading("left side counted backwards", -a, b)
     yield Reading("right side counted backwards", a, -b)
     yield Reading("sides exchanged", b, a)
@@ -126,9 +134,12 @@ def other_readings(left: Int, right: Int, bits: int) -> Iterator[Reading]:
         yield Reading(f"{words} on the right side", a, b * factor)
 
 
-def _without_resets(readings: Int, ticks: Float, bits: int) -> Float:
-    """Increments with those steps taken as zero that end near zero and are far larger than the steps around them."""
+def _without_resets(readings: Int, ticks: Float, bits: int, impossible: Bool) -> Float:
+    """Increments with those steps taken as zero that end near zero and cannot be, or dwarf the steps around them.
+
+    A counter that starts again early in a log has not come far: its step back is too fast, but not yet enormous.
+    """
     usual = float(np.median(np.abs(ticks[ticks != 0]))) if np.any(ticks) else 0.0
     near_zero = readings[1:] < max(4.0 * usual, 2.0)
     near_zero &= readings[1:] < _RESET_SHARE * float(1 << bits) + 4.0 * usual
-    return np.where(near_zero & (np.abs(ticks) > 20.0 * max(usual, 1.0)), 0.0, ticks)
+    return np.where(near_zero & (impossible | (np.abs(ticks) > 20.0 * max(usual, 1.0))), 0.0, ticks)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass, replace
 from datetime import datetime, timedelta
 
@@ -243,7 +244,7 @@ def _explanation(statement: RunStatement, version: VehicleVersion, parameters: F
     closures, lever = closures_of([statement.closure]), levers_of([version])
     factors = (float(parameters[0]), float(parameters[1]))
     possible = None
-    for reading in counters.other_readings(statement.left_counts, statement.right_counts, stated.counter_bits):
+    for reading in _other_readings(statement, version, factors):
         left, right = reading.left_ticks, reading.right_ticks
         if counters.first_impossible_step(left, right, statement.time_s, factors, stated.max_speed_m_per_s) is not None:
             continue
@@ -256,3 +257,15 @@ def _explanation(statement: RunStatement, version: VehicleVersion, parameters: F
     if possible is not None:
         return f"possible as: {possible}, but then it does not end where it was read"
     return "none of the usual mistakes (side negated, sides exchanged, other counts a turn, reset, other width) fits"
+
+
+def _other_readings(
+    statement: RunStatement, version: VehicleVersion, m_per_tick: tuple[float, float]
+) -> Iterator[counters.Reading]:
+    bits, limit = version.statement.counter_bits, version.statement.max_speed_m_per_s
+    sides = statement.left_counts, statement.right_counts
+    left, right = (
+        counters.impossible_steps(counters.increments(counts, bits), statement.time_s, factor, limit)
+        for counts, factor in zip(sides, m_per_tick, strict=True)
+    )
+    return counters.other_readings(*sides, bits, (left, right))

@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+
 import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 from hypothesis.extra import numpy as arrays
 
-from registry.numerics.counters import Reading, first_impossible_step, increments, other_readings
+from registry.numerics.counters import Reading, first_impossible_step, impossible_steps, increments, other_readings
 
 from .drives import Truth, drive, square, straight
 
@@ -77,6 +79,13 @@ def _readings(ticks: np.ndarray, bits: int, start: int = 0) -> np.ndarray:
     return (start + np.concatenate([[0], np.cumsum(ticks.astype(np.int64))])) % (1 << bits)
 
 
+def _others(left: np.ndarray, right: np.ndarray, bits: int, limit_ticks: float = 2000.0) -> Iterator[Reading]:
+    """Other readings where a side can roll so many ticks a sample and no more."""
+    time_s = np.arange(left.size, dtype=np.float64)
+    found = [impossible_steps(increments(side, bits), time_s, 1.0, limit_ticks) for side in (left, right)]
+    return other_readings(left, right, bits, (found[0], found[1]))
+
+
 def _guess(found: list[Reading], guess: str) -> Reading:
     return next(item for item in found if item.guess == guess)
 
@@ -100,7 +109,7 @@ def test_each_mistake_of_practice_is_undone_by_the_reading_that_names_it(
     true_left, true_right = 4.0 * driven.left_ticks, 4.0 * driven.right_ticks
     left = _readings(true_left * left_factor, 32, 1 << 31)
     right = _readings(true_right * right_factor, 32, 1 << 31)
-    undone = _guess(list(other_readings(left, right, 32)), guess)
+    undone = _guess(list(_others(left, right, 32)), guess)
     assert np.array_equal(undone.left_ticks, true_left)
     assert np.array_equal(undone.right_ticks, true_right)
 
@@ -108,7 +117,7 @@ def test_each_mistake_of_practice_is_undone_by_the_reading_that_names_it(
 def test_exchanged_sides_are_exchanged_back() -> None:
     driven = drive(square(2.0, -1), Truth(), np.random.default_rng(2))
     left, right = _readings(driven.right_ticks, 32, 5), _readings(driven.left_ticks, 32, 9)
-    undone = _guess(list(other_readings(left, right, 32)), "sides exchanged")
+    undone = _guess(list(_others(left, right, 32)), "sides exchanged")
     assert np.array_equal(undone.left_ticks, driven.left_ticks)
     assert np.array_equal(undone.right_ticks, driven.right_ticks)
 
@@ -117,7 +126,7 @@ def test_a_narrower_counter_than_stated_is_found_from_its_wraps() -> None:
     driven = drive(straight(30.0), Truth(), np.random.default_rng(3))
     left, right = _readings(driven.left_ticks, 16, 40_000), _readings(driven.right_ticks, 16, 50_000)
     assert np.abs(increments(left, 32)).max() > 60_000
-    undone = _guess(list(other_readings(left, right, 32)), "counter of 16 bits, not 32")
+    undone = _guess(list(_others(left, right, 32)), "counter of 16 bits, not 32")
     assert np.array_equal(undone.left_ticks, driven.left_ticks)
     assert np.array_equal(undone.right_ticks, driven.right_ticks)
 
@@ -128,7 +137,7 @@ def test_a_counter_started_again_from_zero_loses_only_the_step_across_the_start(
     left, right = _readings(driven.left_ticks, 32, 900), _readings(driven.right_ticks, 32, 800)
     left[middle:] -= left[middle]
     right[middle:] -= right[middle]
-    undone = _guess(list(other_readings(left, right, 32)), "counter started again from zero")
+    undone = _guess(list(_others(left, right, 32)), "counter started again from zero")
     lost = undone.left_ticks != driven.left_ticks
     assert np.flatnonzero(lost).tolist() == [middle - 1]
     assert undone.left_ticks[middle - 1] == 0.0
@@ -137,6 +146,22 @@ def test_a_counter_started_again_from_zero_loses_only_the_step_across_the_start(
 def test_a_clean_log_is_not_altered_by_looking_for_restarts() -> None:
     driven = drive(square(5.0, 1), Truth(), np.random.default_rng(5))
     left, right = _readings(driven.left_ticks, 16, 65_000), _readings(driven.right_ticks, 16, 300)
-    undone = _guess(list(other_readings(left, right, 16)), "counter started again from zero")
+    undone = _guess(list(_others(left, right, 16)), "counter started again from zero")
     assert np.array_equal(undone.left_ticks, driven.left_ticks)
     assert np.array_equal(undone.right_ticks, driven.right_ticks)
+
+
+def test_a_counter_started_again_early_is_found_though_its_step_back_is_not_yet_enormous() -> None:
+    # 400 ticks a sample; the left counter stands at 4600 at sample 9 and at 0 at sample 10.
+    right = 1000 + 400 * np.arange(40)
+    left = np.concatenate([1000 + 400 * np.arange(10), 400 * np.arange(30)])
+    undone = _guess(list(_others(left, right, 16)), "counter started again from zero")
+    assert np.flatnonzero(undone.left_ticks != 400.0).tolist() == [9]
+    assert undone.left_ticks[9] == 0.0
+    assert np.array_equal(undone.right_ticks, np.full(39, 400.0))
+
+
+def test_a_drive_back_to_a_counter_near_zero_that_is_possible_is_no_restart() -> None:
+    left = np.concatenate([400 * np.arange(12), 4400 - 1500 * np.arange(1, 3)])
+    undone = _guess(list(_others(left, left, 16)), "counter started again from zero")
+    assert np.array_equal(undone.left_ticks, increments(left, 16))

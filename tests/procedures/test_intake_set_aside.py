@@ -74,6 +74,20 @@ def test_a_counter_started_again_is_named(driven: DrivenVehicle) -> None:
     assert "fits as: counter started again from zero" in run.reasons[0]
 
 
+def test_a_counter_started_again_early_in_the_log_is_named(driven: DrivenVehicle) -> None:
+    with_bits(driven, "tub-16", 16)
+    statement = statement_of(
+        straight(12.0), TRUTH, np.random.default_rng(5), driven.clock(), "early", bits=16, start=20
+    )
+    left = statement.left_counts.copy()
+    early = int(np.argmax(left > 2500))
+    left[early:] -= left[early]
+    assert left.min() >= 0
+    run = taken(driven, replace(statement, left_counts=left), "tub-16")
+    assert f"at sample {early}: left" in run.reasons[0]
+    assert "as: counter started again from zero" in run.reasons[0]
+
+
 @pytest.mark.parametrize(
     ("factor", "words"),
     [(2, "two counts for one on both sides"), (4, "four counts for one on both sides")],
