@@ -226,7 +226,8 @@ def _reasons(
     factors = (float(parameters[0]), float(parameters[1]))
     step = counters.first_impossible_step(*ticks, statement.time_s, factors, limit)
     if step is not None:
-        speed = f"{step.side} {step.speed_m_per_s:.1f} m/s, at most {limit:g} m/s"
+        # In the unit of the field of the door, so that the two can be held against each other.
+        speed = f"{step.side} {1000.0 * step.speed_m_per_s:.0f} mm/s, at most {1000.0 * limit:.12g} mm/s"
         return (f"impossible speed at sample {step.sample}: {speed}; {_explanation(statement, version, parameters)}",)
     rolled_m = _rolled_m(*ticks, parameters)
     if rolled_m < _NO_MOTION_M:

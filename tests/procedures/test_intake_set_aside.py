@@ -52,7 +52,7 @@ def test_an_impossible_speed_names_side_and_sample_and_speed(driven: DrivenVehic
     run = taken(driven, replace(statement, left_counts=counts))
     assert run.use == "set aside"
     assert run.reasons[0].startswith("impossible speed at sample 40: left 3")
-    assert "m/s, at most 2 m/s; none of the usual mistakes" in run.reasons[0]
+    assert " mm/s, at most 2000 mm/s; none of the usual mistakes" in run.reasons[0]
 
 
 def test_a_counter_narrower_than_stated_is_named(driven: DrivenVehicle) -> None:
