@@ -9,6 +9,7 @@ import signal
 import socket
 import subprocess
 import sys
+import threading
 import time
 import urllib.error
 import urllib.request
@@ -83,18 +84,29 @@ def test_serve_prints_its_address_when_it_answers_looks_at_the_fleet_and_ends_on
 
 def test_two_workers_run_and_one_makes_the_pass(rollbook: Commands, tug: str):
     with running("worker", "--home", rollbook.home) as one, running("worker", "--home", rollbook.home) as other:
-        said = ["", ""]
-        for index, worker in enumerate((one, other)):
-            while "The schedule runs" not in said[index]:
-                line = worker.stderr.readline()  # type: ignore[union-attr]  # it is a pipe
-                assert line, said[index]
-                said[index] += line
-        time.sleep(3.0)  # Both look at once when they start.
-        for index, worker in enumerate((one, other)):
+        said: list[list[str]] = [[], []]
+        readers = [
+            threading.Thread(target=lambda worker=worker, lines=lines: lines.extend(worker.stderr))
+            for worker, lines in zip((one, other), said, strict=True)
+        ]
+        for reader in readers:
+            reader.start()
+
+        def heard(words: str) -> int:
+            return sum(words in line for lines in said for line in list(lines))
+
+        until = time.monotonic() + 120.0
+        while (heard("The schedule runs") < 2 or heard("a pass was made") < 1) and time.monotonic() < until:
+            time.sleep(0.1)
+        time.sleep(2.0)  # Both look at once when they start: a second pass would come now.
+        for worker in (one, other):
             worker.send_signal(signal.SIGTERM)
-            said[index] += worker.communicate(timeout=60)[1]
+            worker.wait(timeout=60)
+        for reader in readers:
+            reader.join(timeout=60)
     assert (one.returncode, other.returncode) == (0, 0), said
-    assert sum(text.count("a pass was made") for text in said) == 1
+    assert heard("The schedule runs") == 2, said
+    assert heard("a pass was made") == 1, said
 
 
 def test_serving_without_schedule_makes_no_pass_and_ends_on_sigint(rollbook: Commands, tug: str):
