@@ -14,7 +14,6 @@ from registry.clock import duration_s, parse_time, utc_text
 from registry.commands.session import Place, with_home
 from registry.domain.alert import ALERT_KIND_WORDS, Alert
 from registry.domain.tolerance import QUANTITY_WORDS
-from registry.errors import FieldError, Invalid
 from registry.jobs import fleet_pass
 from registry.jobs.fleet_pass import PassOutcome
 from registry.procedures import authority
@@ -25,13 +24,13 @@ _T = TypeVar("_T")
 
 
 def _read(option: str, text: str | None, parse: Callable[[str], _T]) -> _T | None:
-    """The value of an option, refused like a field of any other door when it is malformed."""
+    """The value of an option; a malformed one is wrong usage."""
     if text is None:
         return None
     try:
         return parse(text)
     except ValueError as error:
-        raise Invalid(f"--{option} {error}", (FieldError(f"/{option}", str(error)),)) from error
+        raise click.BadParameter(str(error), param_hint=f"--{option}") from error
 
 
 def _span(text: str) -> timedelta:

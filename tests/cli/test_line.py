@@ -123,21 +123,40 @@ def test_a_pass_and_a_replay_answer_what_they_did(rollbook: Commands, tug: str, 
 @pytest.mark.parametrize(
     ("arguments", "said"),
     [
-        (("--as-of", "2026-03-01"), "--as-of must be a time with a zone"),
-        (("--as-of", "2026-03-01T00:00:00"), "--as-of must be a time with a zone"),
         (("--as-of", "9999-03-01T00:00:00Z"), "future"),
         (
             ("--from", "2026-03-02T00:00:00Z", "--to", "2026-03-01T00:00:00Z", "--every", "1d"),
             "must not be before from",
         ),
         (("--from", "2026-03-01T00:00:00Z", "--to", "9999-03-01T00:00:00Z", "--every", "1d"), "future"),
-        (("--from", "2026-03-01T00:00:00Z", "--to", "2026-03-02T00:00:00Z", "--every", "daily"), "is no duration"),
-        (("--from", "2026-03-01T00:00:00Z", "--to", "2026-03-02T00:00:00Z", "--every", "0d"), "is no duration"),
         (("nobody",), "nobody"),
     ],
 )
 def test_a_pass_that_cannot_be_is_refused(rollbook: Commands, tug: str, arguments: tuple[str, ...], said: str):
     assert said in rollbook.refused("evaluate", *arguments)
+
+
+_SPAN = ("--from", "2026-03-01T00:00:00Z", "--to", "2026-03-02T00:00:00Z")
+
+
+@pytest.mark.parametrize(
+    ("arguments", "option", "said"),
+    [
+        (("--as-of", "x"), "--as-of", "must be a time with a zone"),
+        (("--as-of", "2026-03-01"), "--as-of", "must be a time with a zone"),
+        (("--as-of", "2026-03-01T00:00:00"), "--as-of", "must be a time with a zone"),
+        (("--as-of", "2026-02-30T00:00:00Z"), "--as-of", "is no date or time of day"),
+        ((*_SPAN, "--every", "daily"), "--every", "is no duration"),
+        ((*_SPAN, "--every", "0d"), "--every", "is no duration"),
+    ],
+)
+def test_a_malformed_option_is_wrong_usage(
+    rollbook: Commands, tug: str, arguments: tuple[str, ...], option: str, said: str
+):
+    done = rollbook("evaluate", *arguments)
+    assert (done.exit_code, done.stdout) == (2, "")
+    assert f"Invalid value for {option}: " in done.stderr
+    assert said in done.stderr
 
 
 @pytest.mark.parametrize(
