@@ -13,7 +13,7 @@ from registry.api.document import PRECONDITIONS, resource
 from registry.api.keys import actor, needs, services
 from registry.domain.tolerance import Tolerance
 from registry.domain.vehicle import Drive, Parameters, ReferencePoint, VehicleStatement, VehicleVersion
-from registry.errors import PreconditionFailed
+from registry.errors import FieldError, Invalid, PreconditionFailed
 from registry.procedures import registration
 from registry.storage import vehicles as stored
 
@@ -46,8 +46,9 @@ class ToleranceBody(Body):
 
 
 class VehicleBody(Body):
-    """A vehicle as a person states it."""
+    """A vehicle as a person states it; `vehicle_id` may repeat that of the path, so that one file serves every door."""
 
+    vehicle_id: fields.VehicleId | None = None
     name: fields.Name
     drive: Drive
     site: fields.Label = None
@@ -164,6 +165,9 @@ def put_vehicle(path: VehiclePath, body: VehicleBody) -> Response:
     The same statement again answers 200. Other values for a known vehicle need `If-Match` with the `ETag` that was
     seen (428 without it, 412 with a stale one) and make a new dated version; old runs keep theirs.
     """
+    if body.vehicle_id not in (None, path.vehicle_id):
+        detail = f"is {body.vehicle_id!r}, but the path names {path.vehicle_id!r}: make them agree, or leave it out"
+        raise Invalid(f"vehicle_id {detail}", (FieldError("/vehicle_id", detail),))
     version, created = registration.put_vehicle(services(), actor(), path.vehicle_id, body.statement(), _seen())
     return reply(described(version), 201 if created else 200, version.statement.etag())
 

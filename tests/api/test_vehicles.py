@@ -31,6 +31,19 @@ def test_what_is_optional_has_the_defaults_of_the_contract(call):
     assert answered["serial"] is None
 
 
+def test_the_body_may_repeat_the_identity_of_the_path_and_no_other(call):
+    plain = call("PUT", "/vehicles/LC-09", "approver", VEHICLE)
+    repeated = call("PUT", "/vehicles/LC-09", "approver", {"vehicle_id": "LC-09"} | VEHICLE)
+    assert (plain.status_code, repeated.status_code) == (201, 200)
+    assert plain.headers["ETag"] == repeated.headers["ETag"]
+    told = call.problem(422, "PUT", "/vehicles/LC-10", "approver", {"vehicle_id": "LC-09"} | VEHICLE)
+    assert pointers(told) == ["/vehicle_id"]
+    assert "'LC-09', but the path names 'LC-10'" in told["detail"]
+    call.problem(404, "GET", "/vehicles/LC-10")
+    told = call.problem(422, "PUT", "/vehicles/LC-10", body={"vehicle_id": "a b"} | VEHICLE)
+    assert pointers(told) == ["/vehicle_id"]
+
+
 def test_other_values_need_the_version_that_was_seen(call):
     etag = call("GET", "/vehicles/LC-07").headers["ETag"]
     other = VEHICLE | {"counter_bits": 16}
