@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import traceback
 from http import HTTPStatus
 
 import structlog
@@ -80,7 +81,9 @@ def answer(error: Exception) -> BaseResponse:
             if name.lower() not in ("content-type", "content-length"):
                 response.headers[name] = value
         return response
-    _log.error("page failed", method=request.method, path=request.path, exc_info=error)
+    # Written out here, because a log that prints local variables too would print passwords.
+    told = "".join(traceback.format_exception(error))
+    _log.error("page failed", method=request.method, path=request.path, exception=told)
     return _page(HTTPStatus.INTERNAL_SERVER_ERROR, "A fault of the program. It has been logged; try again.")
 
 
