@@ -9,17 +9,32 @@ from registry.domain.alert import AlertContent
 from registry.domain.calibration import Calibration, InForce
 from registry.domain.consequence import consequence
 from registry.domain.evaluation import EvaluationResult, Finding, QuantityFinding
+from registry.domain.maintenance import MAINTENANCE_WORDS, Maintenance
 from registry.domain.settling import cannot_tell
 from registry.domain.tolerance import QUANTITIES, QUANTITY_WORDS, Quantity, Tolerance
+from registry.domain.vehicle import Drive
 from registry.numerics.conformity import ACT_AT, CLEAR_AT, WATCH_AT
 
 #: After an adoption a vehicle has this long to load the new set before somebody is sent to it.
 LOAD_WITHIN = timedelta(days=3)
 
-_INSPECT: dict[Quantity, str] = {
-    "tick_factor": "Look at tyre or track wear, tyre pressure and load on both sides",
-    "side_ratio": "Compare the two sides: tyre pressure and wear, or track tension and stretch",
-    "width": "Look at track tension, tread and the floor it turns on",
+#: What to look at, by what the vehicle stands on; None is not known.
+_INSPECT: dict[Drive | None, dict[Quantity, str]] = {
+    None: {
+        "tick_factor": "Look at tyre or track wear, tyre pressure and load on both sides",
+        "side_ratio": "Compare the two sides: tyre pressure and wear, or track tension and stretch",
+        "width": "Look at track tension or tyre pressure, tread and the floor it turns on",
+    },
+    "tracks": {
+        "tick_factor": "Look at track tension, stretch, tread and load on both sides",
+        "side_ratio": "Compare the two sides: track tension, stretch and tread",
+        "width": "Look at track tension, tread and the floor it turns on",
+    },
+    "wheels": {
+        "tick_factor": "Look at tyre pressure, tyre wear and load on both sides",
+        "side_ratio": "Compare the two sides: tyre pressure and wear",
+        "width": "Look at tyre pressure, tyre wear and the floor it turns on",
+    },
 }
 #: More than this many tolerances away, the vehicle should not drive on its present numbers.
 _FAR = 2.0
@@ -85,8 +100,20 @@ def beyond_tolerance(
     tolerance: Tolerance,
     against: Calibration,
     proposal: Calibration | None,
+    *,
+    drive: Drive | None = None,
+    work: Maintenance | None = None,
 ) -> AlertContent:
-    """The alert for a quantity that is beyond its tolerance."""
+    """The alert for a quantity that is beyond its tolerance.
+
+    Parameters
+    ----------
+    drive
+        What the vehicle stands on, so that nobody is sent to look at a tyre of a vehicle on tracks.
+    work
+        Work that ended the window and awaits a new calibration: it explains the deviation, so the advice is to go on
+        to the calibration instead of looking for a cause.
+    """
     index = QUANTITIES.index(quantity)
     item, limit = result.quantities()[index], tolerance.as_tuple()[index]
     deviation, u = item.deviation or 0.0, item.u or 0.0
@@ -96,6 +123,7 @@ def beyond_tolerance(
         if proposal is not None
         else "drive calibration runs and propose a new baseline"
     )
+    first = f"{_INSPECT[drive][quantity]}; then" if work is None else f"{_expected_after(work)};"
     return AlertContent(
         kind="beyond_tolerance",
         quantity=quantity,
@@ -104,7 +132,7 @@ def beyond_tolerance(
             f"(tolerance {100.0 * limit:g} %)"
         ),
         consequence=f"The vehicle {consequence(quantity, deviation, against.result.parameters.width_m)}.",
-        advice=f"{_INSPECT[quantity]}; then {decide}.",
+        advice=f"{first} {decide}.",
         priority="high" if far else "medium",
         act_within="before it drives" if far else "this shift",
         size=deviation,
@@ -113,8 +141,15 @@ def beyond_tolerance(
     )
 
 
+def _expected_after(work: Maintenance) -> str:
+    return f"Expected after the work of {work.done_at:%Y-%m-%d} ({MAINTENANCE_WORDS[work.kind]})"
+
+
 def no_evidence(vehicle_name: str, last_at: datetime | None, as_of: datetime, silence_days: float) -> AlertContent:
-    """The alert for a vehicle of which nothing was heard: silence is not health."""
+    """The alert for a vehicle of which nothing was heard since ``last_at``, the end of its last usable run.
+
+    Silence is not health.
+    """
     since = "no usable run yet" if last_at is None else f"no usable run since {last_at:%Y-%m-%d}"
     days = "" if last_at is None else f" ({(as_of - last_at).days} days)"
     return AlertContent(
@@ -125,6 +160,7 @@ def no_evidence(vehicle_name: str, last_at: datetime | None, as_of: datetime, si
         advice="Drive one run between two known marks and read its end; a straight and a counted turn tell most.",
         priority="low",
         act_within="this week",
+        onset_at=last_at,
     )
 
 

@@ -18,8 +18,9 @@ from registry.domain.judgement import (
     not_loaded,
     percent,
 )
-from registry.domain.tolerance import Tolerance
-from registry.domain.vehicle import Parameters
+from registry.domain.maintenance import Maintenance
+from registry.domain.tolerance import QUANTITIES, Quantity, Tolerance
+from registry.domain.vehicle import Drive, Parameters
 
 NOON = datetime(2026, 3, 2, 12, 0, tzinfo=UTC)
 OPEN = QuantityFinding(None, None, observed=False, probability_beyond=None)
@@ -62,8 +63,10 @@ def test_the_worst_quantity_decides_at_a_half_and_at_ninety_five_percent(
     assert finding_of([seen(value) for value in probabilities], confirmed=True) == finding
 
 
-def test_what_is_not_observed_does_not_count_and_nothing_observed_cannot_tell() -> None:
-    assert finding_of([OPEN, seen(0.2), OPEN], confirmed=True) == "within"
+def test_what_is_not_observed_is_not_taken_for_within() -> None:
+    assert finding_of([OPEN, seen(0.2), OPEN], confirmed=True) == "cannot_tell"
+    assert finding_of([OPEN, seen(0.6), OPEN], confirmed=True) == "uncertain"
+    assert finding_of([OPEN, seen(0.96), OPEN], confirmed=True) == "beyond"
     assert finding_of([OPEN, OPEN, OPEN], confirmed=True) == "cannot_tell"
 
 
@@ -168,6 +171,30 @@ def test_without_a_proposal_the_advice_is_to_drive_calibration_runs() -> None:
 
 
 @pytest.mark.parametrize(
+    ("drive", "foreign"), [("tracks", ("tyre", "pressure", "wheel")), ("wheels", ("track", "tension", "stretch"))]
+)
+@pytest.mark.parametrize("quantity", QUANTITIES)
+def test_the_advice_looks_only_at_parts_that_the_vehicle_has(
+    quantity: Quantity, drive: Drive, foreign: tuple[str, ...]
+) -> None:
+    result = result_of(seen(0.99), seen(0.99), seen(0.99))
+    told = beyond_tolerance("Ore tub 9", quantity, result, Tolerance(), calibration(1), None, drive=drive).advice
+    assert told.startswith(("Look at t", "Compare the two sides: t"))
+    assert not any(word in told for word in foreign)
+
+
+def test_after_work_that_awaits_a_calibration_the_deviation_is_expected_and_nobody_is_sent_to_look() -> None:
+    work = Maintenance("m1", "tub-9", NOON, "track_tensioned", "both", None, True, NOON, "Tove")
+    result = result_of(seen(0.99), seen(0.0), OPEN)
+    content = beyond_tolerance(
+        "Ore tub 9", "tick_factor", result, Tolerance(), calibration(1), calibration(5), drive="tracks", work=work
+    )
+    assert content.advice == (
+        "Expected after the work of 2026-03-02 (track tensioned); decide on calibration 5, which is proposed."
+    )
+
+
+@pytest.mark.parametrize(
     ("deviation", "priority", "act_within"),
     [
         (0.0099, "medium", "this shift"),
@@ -188,6 +215,8 @@ def test_silence_is_told_from_the_last_run_or_from_none() -> None:
     assert since.consequence.startswith("After 30 days without")
     assert no_evidence("Ore tub 9", None, NOON, 30.0).message == "Ore tub 9: no usable run yet"
     assert since.cause() == "no_evidence"
+    assert since.onset_at == NOON - timedelta(days=31, hours=2)
+    assert no_evidence("Ore tub 9", None, NOON, 30.0).onset_at is None
 
 
 def test_a_set_not_loaded_is_told_by_the_numbers_on_both_sides() -> None:
