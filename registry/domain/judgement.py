@@ -47,17 +47,18 @@ def percent(value: float) -> str:
 
 
 def finding_of(quantities: Sequence[QuantityFinding], *, confirmed: bool) -> Finding:
-    """The worst of the observed quantities; ``cannot_tell`` when none is observed.
+    """What is beyond or may be, by the observed quantities; else ``within`` when all three are, else ``cannot_tell``.
 
     ``confirmed`` is whether what is beyond stays likely without any single run: one run alone proves nothing.
+    Two quantities within tolerance say nothing of the third: ``within`` would read as all well.
     """
     probabilities = [item.probability_beyond for item in quantities if item.probability_beyond is not None]
-    if not probabilities:
-        return "cannot_tell"
-    worst = max(probabilities)
+    worst = max(probabilities, default=0.0)
     if worst >= ACT_AT and confirmed:
         return "beyond"
-    return "uncertain" if worst >= WATCH_AT else "within"
+    if worst >= WATCH_AT:
+        return "uncertain"
+    return "within" if all(item.observed for item in quantities) else "cannot_tell"
 
 
 def message_of(quantities: Sequence[QuantityFinding], finding: Finding, runs_used: int, *, confirmed: bool) -> str:
@@ -73,7 +74,9 @@ def message_of(quantities: Sequence[QuantityFinding], finding: Finding, runs_use
         "within": f"Within tolerance by {runs}: {figures}.",
         "uncertain": f"Perhaps beyond tolerance by {runs}: {figures}.",
         "beyond": f"Beyond tolerance by {runs}: {figures}.",
-        "cannot_tell": f"{runs}, and none of the quantities is determined.",
+        "cannot_tell": f"Nothing beyond tolerance by {runs} as far as they tell: {figures}."
+        if figures
+        else f"{runs}, and none of the quantities is determined.",
     }[finding]
     alone = "" if confirmed else " It rests on one run alone; a second one must agree."
     missing = cannot_tell((quantities[0].observed, quantities[1].observed, quantities[2].observed))

@@ -9,7 +9,9 @@ from typing import Literal, get_args
 from registry.domain.alert import ActWithin, Alert
 from registry.domain.boot import Condition
 from registry.domain.calibration import Calibration
+from registry.domain.evaluation import EvaluationResult
 from registry.domain.maintenance import MAINTENANCE_WORDS, Maintenance
+from registry.domain.settling import cannot_tell
 
 #: Most urgent first.
 ACT_WITHIN: tuple[ActWithin, ...] = get_args(ActWithin)
@@ -27,6 +29,9 @@ class NextStep:
     leads_to: LeadsTo
     target_id: str | None = None
 
+
+#: After so many runs, what they do not tell will not come by itself: the vehicle drives courses that cannot.
+TELLING_RUNS = 10
 
 NOTHING_TO_DO = NextStep(None, "Nothing to do.", "", "nothing")
 
@@ -50,6 +55,7 @@ def next_step(
     proposals: Sequence[Calibration],
     condition: Condition | None,
     awaiting: Maintenance | None,
+    latest: EvaluationResult | None = None,
 ) -> NextStep:
     """The most urgent of what is open for one vehicle.
 
@@ -63,6 +69,8 @@ def next_step(
         Of the parameters it is to drive on; None when nothing is in force.
     awaiting
         Maintenance that ended the window and after which no new calibration came into force.
+    latest
+        What the last evaluation found.
     """
     steps: list[NextStep] = []
     if condition is None and not proposals:
@@ -84,6 +92,9 @@ def next_step(
         steps.append(NextStep("this week", sentence, "It drives on provisional values.", "baseline"))
     if condition is not None:
         steps.extend(_of_proposal(proposal) for proposal in proposals)
+    if not steps and latest is not None and latest.finding == "cannot_tell" and latest.runs_used >= TELLING_RUNS:
+        untold = cannot_tell((latest.tick_factor.observed, latest.side_ratio.observed, latest.width.observed))
+        return NextStep("this week", "Drive a run that tells the rest.", untold, "nothing")
     if not steps:
         return NOTHING_TO_DO
     return min(steps, key=lambda step: ACT_WITHIN.index(step.act_within or ACT_WITHIN[-1]))

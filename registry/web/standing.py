@@ -8,7 +8,7 @@ from datetime import datetime
 
 from registry.domain.alert import Alert
 from registry.domain.calibration import InForce
-from registry.domain.evaluation import Evaluation
+from registry.domain.evaluation import Evaluation, EvaluationResult
 from registry.domain.maintenance import Maintenance
 from registry.domain.next_step import NextStep, next_step
 from registry.domain.tolerance import QUANTITIES, Tolerance
@@ -92,6 +92,13 @@ def _held(entry: InForce | None) -> InForce | None:
     return entry if entry is not None and entry.calibration_id is not None else None
 
 
+def _latest(recent: Sequence[Evaluation], held: InForce | None) -> EvaluationResult | None:
+    """What the last evaluation found, if it was against what is in force."""
+    if not recent or held is None or recent[0].result.against != held.calibration_id:
+        return None
+    return recent[0].result
+
+
 def of_fleet(c: Connection) -> list[Standing]:
     """Every vehicle, by identity."""
     open_alerts: dict[str, list[Alert]] = {}
@@ -111,6 +118,7 @@ def of_fleet(c: Connection) -> list[Standing]:
             proposed.get(vehicle_id, ()),
             None if held is None or sheet is None else sheet.condition,
             work,
+            _latest(recent.get(vehicle_id, ()), held),
         )
         width_m = parameters.get(vehicle_id, statement.nominal).width_m
         strips = strips_of(statement.tolerance, width_m, held, recent.get(vehicle_id, ()), work)
@@ -123,15 +131,16 @@ def of_vehicle(c: Connection, version: VehicleVersion, now: datetime) -> Standin
     vehicle_id, statement = version.vehicle_id, version.statement
     held, sheet = _held(calibrations.in_force(c, vehicle_id, now)), boots.sheet(c, vehicle_id)
     work = boot.awaiting(c, vehicle_id)
+    recent = evaluations.page(c, vehicle_id, TRAIL_LENGTH + 1, None).items
     step = next_step(
         alerts.open_for(c, vehicle_id),
         calibrations.open_proposals(c, vehicle_id),
         None if held is None or sheet is None else sheet.condition,
         work,
+        _latest(recent, held),
     )
     width_m = statement.nominal.width_m
     if held is not None and held.calibration_id is not None:
         width_m = calibrations.by_id(c, held.calibration_id).result.parameters.width_m
-    recent = evaluations.page(c, vehicle_id, TRAIL_LENGTH + 1, None).items
     strips = strips_of(statement.tolerance, width_m, held, recent, work)
     return Standing(version, held, None if sheet is None else sheet.condition, step, strips)

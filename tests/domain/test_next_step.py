@@ -7,8 +7,9 @@ from datetime import UTC, datetime
 
 from registry.domain.alert import Alert, AlertContent
 from registry.domain.calibration import Calibration, CalibrationResult, Observed
+from registry.domain.evaluation import EvaluationResult, QuantityFinding
 from registry.domain.maintenance import Maintenance
-from registry.domain.next_step import NOTHING_TO_DO, next_step
+from registry.domain.next_step import NOTHING_TO_DO, TELLING_RUNS, next_step
 from registry.domain.vehicle import Parameters
 
 AT = datetime(2031, 5, 4, 12, 0, tzinfo=UTC)
@@ -93,3 +94,31 @@ def test_provisional_values_ask_for_calibration_runs() -> None:
 
 def test_provisional_values_with_a_proposal_ask_for_the_decision() -> None:
     assert next_step((), (PROPOSAL,), "provisional", None).leads_to == "proposal"
+
+
+SEEN = QuantityFinding(0.0001, 0.0002, observed=True, probability_beyond=0.0)
+UNTOLD = QuantityFinding(None, None, observed=False, probability_beyond=None)
+PARTLY = EvaluationResult(
+    "c1",
+    TELLING_RUNS,
+    AT,
+    AT,
+    SEEN,
+    SEEN,
+    UNTOLD,
+    Parameters(1e-4, 1e-4, 0.5),
+    (1e-4, 1e-4, 1.0),
+    2.0,
+    "cannot_tell",
+    "",
+)
+
+
+def test_many_runs_that_leave_a_quantity_untold_ask_for_the_run_that_tells_it() -> None:
+    step = next_step((), (), "good", None, PARTLY)
+    assert step.act_within == "this week"
+    assert "effective width: turn on the spot" in step.why
+
+
+def test_a_few_runs_may_leave_a_quantity_untold_for_now() -> None:
+    assert next_step((), (), "good", None, replace(PARTLY, runs_used=TELLING_RUNS - 1)) == NOTHING_TO_DO

@@ -87,7 +87,7 @@ def test_what_is_not_observed_is_not_published_beside_what_is(calibrated: Driven
     result = found(calibrated).result
     assert [item.observed for item in result.quantities()] == [True, True, False]
     assert (result.width.deviation, result.width.probability_beyond) == (None, None)
-    assert result.finding == "within"
+    assert result.finding == "cannot_tell"
     assert "cannot tell effective width" in result.message
 
 
