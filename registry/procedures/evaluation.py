@@ -19,7 +19,7 @@ from registry.domain.tolerance import QUANTITIES, Quantity
 from registry.domain.vehicle import VehicleVersion
 from registry.numerics import closure_map
 from registry.procedures import alerting, proposals, standing_questions
-from registry.procedures.boot_sheets import refresh_sheet
+from registry.procedures.boot_sheets import awaiting, refresh_sheet
 from registry.procedures.window_fit import Verdict, judge
 from registry.services import Services
 from registry.storage import alerts as alert_store
@@ -274,7 +274,14 @@ def _follow_alerts(
             alerting.clear(c, services, vehicle_id, f"beyond_tolerance:{quantity}", as_of, result.message)
         elif item.observed:
             content = judgement.beyond_tolerance(
-                stated.name, quantity, result, stated.tolerance, answer.against, proposal
+                stated.name,
+                quantity,
+                result,
+                stated.tolerance,
+                answer.against,
+                proposal,
+                drive=stated.drive,
+                work=awaiting(c, vehicle_id, as_of),
             )
             alerting.raise_or_update(c, services, vehicle_id, content, as_of)
 
