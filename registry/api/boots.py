@@ -18,7 +18,7 @@ doors = resource("boots")
 
 
 class BootBody(Body):
-    """What was loaded, by number or digest; parameters that are built in have neither."""
+    """What was loaded, by number or digest, whatever its source. `built_in` may have neither: it is then a mismatch."""
 
     calibration_number: Annotated[int, Field(ge=0, le=2**31 - 1)] | None = None
     digest: fields.Digest | None = None

@@ -7,7 +7,7 @@ from collections.abc import Sequence
 from datetime import datetime
 from typing import Any
 
-from sqlalchemy import Dialect, Row, bindparam, func, insert, select, true
+from sqlalchemy import Dialect, Row, and_, bindparam, func, insert, or_, select, true
 from sqlalchemy.sql.compiler import SQLCompiler
 
 from registry.domain.boot import Boot, BootSheet, BootStatement
@@ -67,6 +67,19 @@ def latest(c: Connection, vehicle_id: str, until: datetime | None = None) -> Boo
         statement = statement.where(boots.c.booted_at <= until)
     row = c.execute(statement.order_by(*_NEWEST_FIRST).limit(1)).first()
     return None if row is None else _boot(row)
+
+
+def mismatched_since(c: Connection, vehicle_id: str) -> datetime | None:
+    """The first boot after the last one that matched, in the order of the boots; None when the last one matched."""
+    of_vehicle = boots.c.vehicle_id == vehicle_id
+    matched = select(boots.c.booted_at, boots.c.sequence).where(of_vehicle, boots.c.matched.is_(True))
+    last = c.execute(matched.order_by(*_NEWEST_FIRST).limit(1)).first()
+    wrong = select(boots.c.booted_at).where(of_vehicle, boots.c.matched.is_(False))
+    if last is not None:
+        at_once = and_(boots.c.booted_at == last.booted_at, boots.c.sequence > last.sequence)
+        wrong = wrong.where(or_(boots.c.booted_at > last.booted_at, at_once))
+    since: datetime | None = c.scalar(wrong.order_by(boots.c.booted_at, boots.c.sequence).limit(1))
+    return since
 
 
 def latest_all(c: Connection) -> dict[str, Boot]:

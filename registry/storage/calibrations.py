@@ -18,7 +18,8 @@ from registry.storage.tables import calibration_runs, calibration_standings, cal
 
 __all__ = [
     "add", "add_standing", "all_for", "all_in_force", "by_id", "by_number", "find_by_number", "first_run_at",
-    "in_force", "in_force_history", "open_proposals", "page", "put_in_force", "withdrawn_numbers",
+    "in_force", "in_force_history", "open_proposals", "page", "put_in_force", "withdrawn_at",
+    "withdrawn_numbers",
 ]  # fmt: skip
 
 
@@ -174,6 +175,14 @@ def withdrawn_numbers(c: Connection, vehicle_id: str, until: datetime | None = N
     if until is not None:
         statement = statement.where(standings.c.at <= until)
     return tuple(c.scalars(statement.order_by(calibrations.c.number)))
+
+
+def withdrawn_at(c: Connection, calibration_id: str) -> datetime | None:
+    """The moment a calibration was withdrawn; None for one that was not."""
+    standings = calibration_standings
+    wanted = (standings.c.calibration_id == calibration_id, standings.c.standing == "withdrawn")
+    at: datetime | None = c.scalar(select(func.min(standings.c.at, type_=standings.c.at.type)).where(*wanted))
+    return at
 
 
 def first_run_at(c: Connection, calibration_id: str) -> datetime | None:

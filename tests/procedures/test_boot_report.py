@@ -56,7 +56,7 @@ def test_a_digest_handed_out_before_a_change_of_counting_still_names_its_calibra
         (None, "0" * 64, "kept", "digest that was never handed out"),
         (1, "0" * 64, "kept", "digest that was never handed out"),
         (None, None, "built_in", "built into it"),
-        (1, None, "built_in", "built into it"),
+        (7, None, "built_in", "number 7 that it never had"),
     ],
 )
 def test_what_is_not_known_here_or_built_in_raises_at_once(services, proposer, number, digest, source, words):
@@ -68,6 +68,14 @@ def test_what_is_not_known_here_or_built_in_raises_at_once(services, proposer, n
     assert words in alert.content.message
     assert (alert.content.priority, alert.content.act_within) == ("high", "before it drives")
     assert "calibration 1" in alert.content.advice
+
+
+def test_number_or_digest_say_what_was_loaded_whatever_the_source(services, proposer, reader):
+    proposer.adopt()
+    for source in ("fetched", "kept", "carried", "built_in", None):
+        assert report(services, 1, None, source).matched
+        assert report(services, None, digest_of(services, reader), source).matched
+    assert mismatch(services) is None
 
 
 def test_number_and_digest_that_contradict_each_other_say_so(services, proposer, reader, clock):
@@ -185,18 +193,102 @@ def test_a_matching_boot_clears_the_alert_and_a_second_mismatch_updates_it(servi
         assert alerts.by_id(c, first.alert_id).standing == "closed"
 
 
-def test_a_report_that_arrives_after_that_of_a_later_boot_says_nothing_about_now(services, proposer, clock):
+def test_a_late_report_of_a_mismatch_before_a_right_boot_is_raised_and_stands_as_returned_until_seen(
+    services, proposer, clock, technician
+):
     proposer.adopt()
     clock.move(days=3)
     assert report(services, 1).matched
-    late = report(services, 7, booted_at=clock() - timedelta(days=1))
-    assert not late.matched
-    assert mismatch(services) is None
-    report(services, 7)
-    report(services, 1, booted_at=clock() - timedelta(hours=1))
-    assert mismatch(services) is not None
+    wrong_at = clock() - timedelta(days=1)
+    assert not report(services, 7, booted_at=wrong_at).matched
+    alert = mismatch(services)
+    assert alert is not None
+    assert alert.standing == "returned"
+    assert alert.content.onset_at == wrong_at
+    assert "number 7 that it never had" in alert.content.message
+    assert "It has loaded what is in force since" in alert.content.advice
     with services.read() as c:
-        assert len(boots.all_for(c, "tub-7")) == 4
+        told = [(event.what, event.note) for event in alerts.by_id(c, alert.alert_id).history]
+    assert [what for what, _ in told] == ["raised", "no longer holds"]
+    assert told[-1][1] == f"a later boot, {clock():%Y-%m-%d %H:%M} UTC, loaded what is in force"
+    assert alerting.acknowledge(services, technician, alert.alert_id, "seen").standing == "closed"
+
+
+def test_a_late_report_of_a_right_boot_clears_nothing(services, proposer, clock):
+    proposer.adopt()
+    clock.move(days=3)
+    report(services, 7)
+    assert report(services, 1, booted_at=clock() - timedelta(hours=1)).matched
+    alert = mismatch(services)
+    assert alert is not None
+    assert alert.standing == "unacknowledged"
+    assert alert.content.onset_at == clock()
+    with services.read() as c:
+        assert len(boots.all_for(c, "tub-7")) == 2
+
+
+def test_the_onset_is_the_first_of_the_wrong_boots_in_whatever_order_they_are_reported(services, proposer, clock):
+    proposer.adopt()
+    clock.move(days=3)
+    first_at = clock()
+    report(services, 7)
+    clock.move(hours=4)
+    report(services, 8)
+    alert = mismatch(services)
+    assert alert is not None
+    assert "number 8" in alert.content.message
+    assert alert.content.onset_at == first_at
+    report(services, 9, booted_at=first_at - timedelta(hours=2))
+    alert = mismatch(services)
+    assert alert is not None
+    assert "number 8" in alert.content.message, "the alert tells of the last boot"
+    assert alert.content.onset_at == first_at - timedelta(hours=2)
+    report(services, 1, booted_at=first_at + timedelta(hours=1))
+    alert = mismatch(services)
+    assert alert is not None
+    assert (alert.standing, alert.content.onset_at) == ("unacknowledged", clock())
+
+
+def test_the_onset_begins_anew_with_the_first_wrong_boot_after_a_right_one(services, proposer, clock):
+    proposer.adopt()
+    report(services, 7)
+    clock.move(hours=1)
+    report(services, 1)
+    clock.move(hours=1)
+    report(services, 7)
+    alert = mismatch(services)
+    assert alert is not None
+    assert (alert.standing, alert.content.onset_at) == ("unacknowledged", clock())
+
+
+def test_a_set_that_was_in_force_at_the_boot_matches_even_when_it_was_withdrawn_since(
+    services, proposer, approver, clock
+):
+    first = proposer.adopt()
+    clock.move(days=3)
+    second = proposer.adopt()
+    clock.move(days=3)
+    withdrawn_at = clock()
+    withdraw(services, approver, second.calibration_id, "misread", "reinstate", first.number)
+    clock.move(hours=1)
+    assert report(services, 2, booted_at=withdrawn_at - timedelta(hours=1)).matched
+    assert report(services, 2, booted_at=withdrawn_at - timedelta(seconds=1)).matched
+    assert mismatch(services) is None
+    assert not report(services, 2, booted_at=withdrawn_at).matched
+    assert not report(services, 2).matched
+    assert "which is withdrawn" in mismatch(services).content.message
+
+
+def test_a_superseded_set_that_is_withdrawn_loses_its_grace_from_then_on(services, proposer, approver, clock):
+    first = proposer.adopt()
+    clock.move(days=3)
+    proposer.adopt()
+    clock.move(hours=2)
+    withdrawn_at = clock()
+    withdraw(services, approver, first.calibration_id, "misread", "nothing", None)
+    clock.move(hours=2)
+    assert report(services, 1, booted_at=withdrawn_at - timedelta(hours=1)).matched
+    assert not report(services, 1).matched
 
 
 def test_a_boot_ahead_of_the_clock_or_without_any_name_is_refused_and_nothing_is_stored(services, proposer, clock):
