@@ -45,8 +45,8 @@ METHOD_VERSION = "1"
 DEFAULT_ROLLING_NOISE_M = 2.5e-7
 _STEP_LIMIT = 0.2
 _ITERATIONS = 60
-#: Settled: a step of a two-hundredth of the standard uncertainty.
-_SETTLED_STEP = 5e-3
+#: Settled: a step of a hundredth of the standard uncertainty.
+_SETTLED_STEP = 1e-2
 
 Status = Literal["converged", "not converged", "outside maps"]
 

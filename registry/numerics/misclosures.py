@@ -16,8 +16,10 @@ from registry.numerics.variance_parts import VarianceParts, Whitened
 #: is far below. The side ratio of a drive that goes straight is never far from its start, and on straight distances
 #: alone it acts by its square only: held more loosely it would wander there.
 WEAK_SD = np.array([1.0, 0.02, 1.0])
-#: Steps with bounded influence before far runs lose theirs altogether: a poor start must not choose its outliers.
+#: Steps with bounded influence before far runs lose theirs altogether: a poor start must not choose its outliers. They
+#: end early once a step is within this share of the standard uncertainties and of the variances.
 _BOUNDED_FIRST = 5
+_CALM = 0.1
 #: The variances stand when a step moves them by less than this share.
 _SETTLED_NOISE = 1e-2
 
@@ -36,9 +38,10 @@ class Misclosures:
         self.free = free
         self.parts = VarianceParts(guess, rolling=4.0 * guess)
         self.rounds = 0
+        self.bounded = True
         self.at = start[self.free]
         self.runs = linearise(stack, closures, start)
-        self.weigh(bounded=True)
+        self.weigh(self.bounded)
 
     @property
     def quantities(self) -> Float:
@@ -91,9 +94,11 @@ class Misclosures:
         self.rounds += 1
         seen = Whitened(self.runs, self.whitener, self.weight, self.root(solution))
         moved = self.parts.step(seen)
-        stand = still and moved < _SETTLED_NOISE and self.rounds > _BOUNDED_FIRST
+        stand = still and moved < _SETTLED_NOISE and not self.bounded
         stand = stand and not self.parts.take_up_spread(seen)
-        self.weigh(bounded=self.rounds < _BOUNDED_FIRST)
+        calm = moved < _CALM and bool(np.all(np.abs(solution.change) < _CALM * solution.u))
+        self.bounded = self.bounded and not calm and self.rounds < _BOUNDED_FIRST
+        self.weigh(self.bounded)
         return stand
 
     def root(self, solution: Solution) -> Float:
