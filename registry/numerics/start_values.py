@@ -1,8 +1,8 @@
 r"""A first guess of the parameters from runs, when the ruler's width may be wrong by 10 to 80 % and headings wrap.
 
 Runs that hardly turn give the scale; then every width on a grid fine enough that no heading can slip a full turn
-between
-neighbours is tried, with the side ratio that the straight runs ask for at that width. The best few are refined by
+between neighbours is tried, with the side ratio that the straight runs ask for at that width. The best few are refined
+by
 the fit itself on thinned counts, and the one with the smallest deviance is the start.
 
 Why this form: the deviance in the width has one minimum per whole turn of the most turning run. A search over all of
@@ -18,6 +18,7 @@ import numpy as np
 from registry.numerics.arrays import Float
 from registry.numerics.closure import DISTANCE, HEADING, Closures, misclosure
 from registry.numerics.fit import fit
+from registry.numerics.kinematics import sinc_and_slope
 from registry.numerics.stacks import CountsStack
 
 _WIDTH_RANGE = (0.5, 2.2)
@@ -54,7 +55,8 @@ def find_start(counts: Sequence[tuple[Float, Float]], levers_m: Float, closures:
     count = int(np.clip(np.log(_WIDTH_RANGE[1] / _WIDTH_RANGE[0]) * float(turn.max()) / 0.5, 48, 400))
     widths = nominal[2] * np.geomspace(*_WIDTH_RANGE, count)
     candidates = np.array([_with_side_ratio(scaled, width, totals, closures) for width in widths])
-    costs = np.array([_rough_cost(stack, closures, item, rolled * scaled[0]) for item in candidates])
+    joined = _Joined(thinned, levers_m)
+    costs = np.array([_rough_cost(joined, closures, item, rolled * scaled[0]) for item in candidates])
     lowest = np.flatnonzero((costs <= np.r_[np.inf, costs[:-1]]) & (costs <= np.r_[costs[1:], np.inf]))
     best = lowest[np.argsort(costs[lowest])][:_CANDIDATES]
     fits = [fit(stack, closures, candidates[index]) for index in best]
@@ -99,9 +101,37 @@ def _with_side_ratio(scaled: Float, width: float, totals: Float, closures: Closu
     return np.array([k * (1.0 - 0.5 * ratio), k * (1.0 + 0.5 * ratio), width])
 
 
-def _rough_cost(stack: CountsStack, closures: Closures, parameters: Float, rolled_m: Float) -> float:
+class _Joined:
+    """All runs in one row of samples, so that a point of the grid costs one pass over them and no loop over runs."""
+
+    def __init__(self, counts: Sequence[tuple[Float, Float]], levers_m: Float) -> None:
+        # A first sample of nothing keeps a run without samples from borrowing its neighbour's.
+        left, right = ([np.concatenate([[0.0], run[side]]) for run in counts] for side in (0, 1))
+        self.left, self.right = 0.5 * np.concatenate(left), 0.5 * np.concatenate(right)
+        self.left_middle = np.concatenate([np.cumsum(run) for run in left]) - self.left
+        self.right_middle = np.concatenate([np.cumsum(run) for run in right]) - self.right
+        self.begin = np.cumsum([0, *(run.size for run in left[:-1])])
+        self.totals = np.array([(a.sum(), b.sum()) for a, b in zip(left, right, strict=True)])
+        self.levers_m = np.asarray(levers_m, dtype=np.float64)
+
+    def poses(self, parameters: Float) -> Float:
+        """End poses (n, 3) of the reference points."""
+        width = float(parameters[2])
+        a, b = float(parameters[0]) / width, float(parameters[1]) / width
+        left, right = a * self.left, b * self.right
+        step = (left + right) * sinc_and_slope(right - left)[0]
+        heading = b * self.right_middle - a * self.left_middle
+        x = width * np.add.reduceat(step * np.cos(heading), self.begin)
+        y = width * np.add.reduceat(step * np.sin(heading), self.begin)
+        turn = b * self.totals[:, 1] - a * self.totals[:, 0]
+        arm = self.levers_m[:, 0] + 1j * self.levers_m[:, 1]
+        end = x + 1j * y + arm * (np.exp(1j * turn) - 1.0)
+        return np.stack([end.real, end.imag, turn], axis=1)
+
+
+def _rough_cost(runs: _Joined, closures: Closures, parameters: Float, rolled_m: Float) -> float:
     """Sum of logarithms of rough squared distances: one hopeless run cannot hide a good width."""
-    difference = misclosure(closures, stack.poses(parameters))
+    difference = misclosure(closures, runs.poses(parameters))
     rough = np.repeat((_ROUGH_SHARE * rolled_m)[:, None] ** 2, 4, axis=1)
     rough[:, HEADING] = _ROUGH_HEADING_RAD**2
     return float(np.log1p((difference**2 / (closures.variance + rough)).sum(axis=1)).sum())
