@@ -2,11 +2,15 @@
 
 from __future__ import annotations
 
+from http import HTTPStatus
+from typing import cast
+
 from flask import Flask, Request, request
 from flask.sessions import SecureCookieSession, SecureCookieSessionInterface
 from werkzeug.wrappers import Response
 
 from registry.api import document, doors, problems
+from registry.api.strict_json import StrictRequest
 from registry.services import Services
 from registry.web import pages, refusals
 
@@ -25,6 +29,7 @@ def create_app(services: Services) -> Flask:
     doors.register(app, services)
     pages.register(app, services)
     app.register_error_handler(Exception, _answer)
+    app.after_request(_drained)
     return app
 
 
@@ -35,6 +40,13 @@ class _PageSessions(SecureCookieSessionInterface):
         if problems.is_for_machines(request.path):
             return self.make_null_session(app)
         return super().open_session(app, request)
+
+
+def _drained(response: Response) -> Response:
+    """A body that is refused for its length is taken off the line first, so that its sender hears the refusal."""
+    if response.status_code == HTTPStatus.REQUEST_ENTITY_TOO_LARGE:
+        cast(StrictRequest, request).drain()
+    return response
 
 
 def _answer(error: Exception) -> Response:

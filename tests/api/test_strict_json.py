@@ -7,7 +7,15 @@ import tracemalloc
 import pytest
 from werkzeug.exceptions import UnsupportedMediaType
 
-from registry.api.strict_json import MAX_SAMPLES, MAX_UNPACKED_BYTES, parsed, unpacked
+from registry.api.strict_json import (
+    MAX_BODY_BYTES,
+    MAX_DRAINED_BYTES,
+    MAX_SAMPLES,
+    MAX_UNPACKED_BYTES,
+    StrictRequest,
+    parsed,
+    unpacked,
+)
 from registry.errors import Invalid, Malformed, TooLarge
 
 RUN = {"run_key": "k", "closure": {"x_mm": 1.5, "turns": -2}, "time_s": [0, 0.5], "note": "Fähre ✓"}
@@ -134,3 +142,33 @@ def test_a_body_that_unpacks_without_end_is_too_large_and_memory_stays_bounded()
         assert tracemalloc.get_traced_memory()[1] < 1.5 * MAX_UNPACKED_BYTES
     finally:
         tracemalloc.stop()
+
+
+class Pouring:
+    """A body as the server hands it on: so many bytes, read piece by piece."""
+
+    def __init__(self, size: int) -> None:
+        self.left, self.taken = size, 0
+
+    def read(self, size: int) -> bytes:
+        size = min(size, self.left)
+        self.left -= size
+        self.taken += size
+        return bytes(size)
+
+
+@pytest.mark.parametrize(
+    ("length", "pours", "taken"),
+    [
+        (17_000_000, 10**9, 17_000_000),
+        (10**9, 10**9, MAX_DRAINED_BYTES),
+        (None, 10**9, MAX_DRAINED_BYTES),
+        (None, 1_000_000, 1_000_000),
+        (MAX_BODY_BYTES, 10**9, 0),
+    ],
+)
+def test_a_body_that_is_too_long_is_drained_up_to_its_length_or_a_bound(length, pours, taken):
+    stream = Pouring(pours)
+    environ = {"wsgi.input": stream, "REQUEST_METHOD": "POST"}
+    StrictRequest(environ | ({} if length is None else {"CONTENT_LENGTH": str(length)})).drain()
+    assert stream.taken == taken
