@@ -26,6 +26,7 @@ from registry.procedures.run_checks import (
     check_range,
     content_digest,
     plain_closure,
+    sealed,
 )
 from registry.services import Services
 from registry.storage import calibrations as calibration_store
@@ -36,7 +37,8 @@ from registry.storage import vehicles as vehicle_store
 from registry.storage.engine import Connection
 
 __all__ = [
-    "MAX_KEY_LENGTH", "MAX_SAMPLES", "RunStatement", "check_run", "content_digest", "restore", "set_aside", "take_run",
+    "MAX_KEY_LENGTH", "MAX_SAMPLES", "RunStatement", "check_run", "content_digest", "restore", "sealed", "set_aside",
+    "take_run",
 ]  # fmt: skip
 
 #: Below this the vehicle has not moved: a few millimetres of play in the drive are not a run.

@@ -6,13 +6,14 @@ import hashlib
 import math
 import unicodedata
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass, replace
 from datetime import datetime, timedelta
 from typing import Any
 
 import numpy as np
 import orjson
 
+from registry.clock import utc_text
 from registry.domain.run import ClosureStatement, Conditions
 from registry.errors import FieldError, Invalid, TooLarge
 from registry.numerics.arrays import Float, Int
@@ -31,8 +32,8 @@ _LARGEST, _SMALLEST_SD, _MAX_TURNS = 1e6, 1e-12, 100_000
 class RunStatement:
     """A run as it comes through a door, in SI.
 
-    ``time_s`` (n,), ``left_counts`` and ``right_counts`` (n,) are as logged; ``content_digest`` identifies the whole
-    body.
+    ``time_s`` (n,), ``left_counts`` and ``right_counts`` (n,) are as logged; ``content_digest`` identifies all of it,
+    see `sealed`.
     """
 
     run_key: str
@@ -48,6 +49,19 @@ class RunStatement:
 def content_digest(body: dict[str, Any]) -> str:
     """Identity of a body as parsed: the same fields and values, in any order and spacing, give the same digest."""
     return hashlib.sha256(orjson.dumps(body, option=orjson.OPT_SORT_KEYS)).hexdigest()
+
+
+def sealed(statement: RunStatement) -> RunStatement:
+    """The statement with the identity of what it holds: the same run has the same one, through whichever door."""
+    ticks = {"time_s": statement.time_s, "left": statement.left_counts, "right": statement.right_counts}
+    content = {
+        "run_key": statement.run_key,
+        "started_at": utc_text(statement.started_at),
+        "ticks": {name: hashlib.sha256(values.data).hexdigest() for name, values in ticks.items()},
+        "closure": asdict(statement.closure),
+        "conditions": asdict(statement.conditions),
+    }
+    return replace(statement, content_digest=content_digest(content))
 
 
 def check(statement: RunStatement, now: datetime) -> None:

@@ -1,10 +1,15 @@
 """Runs are taken once, kept as they were handed in, and said to be usable or not."""
 
+import csv
 import gzip
 import json
 from datetime import timedelta
 
 import pytest
+
+from registry.domain.person import Actor
+from registry.errors import Invalid
+from registry.procedures.manifest import load_manifest
 
 from .calling import drive, run
 
@@ -72,6 +77,31 @@ def test_gzip_is_taken_and_is_the_same_content(call, body):
     first = call("POST", "/vehicles/LC-07/runs", "LC-07", packed, headers={"Content-Encoding": "gzip"})
     assert first.status_code == 201
     assert call("POST", "/vehicles/LC-07/runs", "LC-07", body).status_code == 200
+
+
+@pytest.fixture
+def manifest(body, tmp_path):
+    """The same run as files: a row of a manifest and its tick log."""
+    log = zip(body["time_s"], body["left_counts"], body["right_counts"], strict=True)
+    rows = ["time_s,left_counts,right_counts", *(",".join(map(str, sample)) for sample in log)]
+    (tmp_path / "square.csv").write_text("\n".join(rows) + "\n")
+    noted = {name: body[name] for name in ("run_key", "started_at", "note", "load_kg", "driven_by")}
+    cells = {"vehicle_id": "LC-07", "ticks_file": "square.csv", "distance_mm": None, **noted, **body["closure"]}
+    path = tmp_path / "runs.csv"
+    with path.open("w", newline="") as file:
+        csv.writer(file).writerows([cells.keys(), cells.values()])
+    return path
+
+
+def test_one_run_by_two_doors_is_one_run(call, body, services, manifest):
+    first = call.ok("POST", "/vehicles/LC-07/runs", "LC-07", body)
+    (loaded,) = load_manifest(services, Actor("local", "abel"), manifest)
+    assert (loaded.created, loaded.run.run_id) == (False, first["run_id"])
+    again = call("POST", "/vehicles/LC-07/runs", "LC-07", body | {"surface": None, "course": ""})
+    assert again.status_code == 200
+    manifest.write_text(manifest.read_text().replace("dry, empty", "wet, empty"))
+    with pytest.raises(Invalid, match="known with other content"):
+        load_manifest(services, Actor("local", "abel"), manifest)
 
 
 def test_a_body_is_read_as_json_whatever_its_declared_type(call, body):
