@@ -47,11 +47,16 @@ def make_engine(url: str, *, durable: bool = True) -> Engine:
     if url.startswith("sqlite"):
         if make_url(url).database in (None, "", ":memory:"):
             raise ValueError("an in-memory database is another one in every thread: name a file")
-        engine = create_engine(url, connect_args={"isolation_level": None, "timeout": BUSY_TIMEOUT_S}, max_overflow=30)
+        engine = create_engine(
+            url,
+            connect_args={"isolation_level": None, "timeout": BUSY_TIMEOUT_S},
+            max_overflow=30,
+            hide_parameters=True,  # An error's text goes to the log; the hashes of keys and passwords do not.
+        )
         synchronous = "FULL" if durable else "NORMAL"
         event.listen(engine, "connect", lambda connection, _record: _prepare_sqlite(connection, synchronous))
         return engine
-    return create_engine(url, max_overflow=30, pool_pre_ping=True)
+    return create_engine(url, pool_pre_ping=True, max_overflow=30, hide_parameters=True)
 
 
 def _prepare_sqlite(connection: sqlite3.Connection, synchronous: str) -> None:
