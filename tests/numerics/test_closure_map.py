@@ -81,6 +81,22 @@ def test_a_folded_run_ends_where_its_counts_end_within_the_stated_bound(
         assert heading_slopes == pytest.approx(0.0, abs=1e-12 * (1 + rolled_m / CENTRE[2]))
 
 
+@pytest.mark.parametrize(("samples", "turns"), [(12_000, 190.0), (12_000, 500.0), (2_000, 30.0)])
+def test_samples_that_turn_far_on_a_long_run_are_counted_in_the_bound(samples: int, turns: float) -> None:
+    """Five kilometres with every sample turning at random: two points a sample are not enough without cutting."""
+    turn = np.random.default_rng(0).standard_normal(samples)
+    turn *= 2 * np.pi * turns / np.abs(turn).sum()
+    left = np.round((5000.0 / samples - turn * CENTRE[2] / 2) / CENTRE[0])
+    right = np.round((5000.0 / samples + turn * CENTRE[2] / 2) / CENTRE[1])
+    item = fold(left, right, CENTRE)
+    assert item.error_m <= closure_map.WANTED_ERROR_M
+    for common, difference in ((0.0, 0.0), (1.0, -1.0), (-0.4, 0.9)):
+        parameters = _in_box(item, common, difference)
+        away = MapStack([item], NO_LEVER).predict(parameters).pose[0] - end_pose(left, right, parameters).pose
+        # Rounding of phases of 16,000 rad on 5 km is 1e-8 m.
+        assert np.hypot(*away[:2]) <= item.error_m + 1e-8
+
+
 @settings(max_examples=25, deadline=None)
 @given(logs(), PLACES, PLACES)
 def test_the_slopes_of_a_folded_run_are_the_differences_of_its_own_ends(

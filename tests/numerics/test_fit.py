@@ -291,3 +291,18 @@ def test_a_mark_off_the_axle_gives_the_same_parameters() -> None:
     assert np.abs(apart / right.u_quantities).max() < 0.02
     wrong = fit(CountsStack(counts, np.zeros((len(runs), 2))), closures, truth.parameters * NEARBY)
     assert wrong.deviance > right.deviance + 50
+
+
+def test_straight_distances_alone_come_to_rest_though_the_side_ratio_acts_by_its_square() -> None:
+    """Gauss-Newton steps overshoot in a hollow of fourth order, and would swing about it without end."""
+    truth, statuses = session(9).truth, []
+    for seed in range(30):
+        rng = np.random.default_rng(seed)
+        runs = [drive(straight(length), truth, rng, rate_hz=5.0) for length in rng.uniform(15.0, 30.0, 10)]
+        closures = read_ends(runs, rng, position_sd_m=0.003)
+        closures.present[:] = [True, False, False, False]
+        stack = CountsStack([run.ticks for run in runs], np.zeros((10, 2)))
+        found = fit(stack, closures, truth.parameters * np.array([1.002, 0.999, 1.0]))
+        statuses.append(found.status)
+        assert found.u_quantities[0] < 0.001
+    assert statuses.count("converged") >= 29

@@ -101,21 +101,3 @@ def test_weights_that_still_move_keep_the_iteration_going() -> None:
     found = gauss_newton(curve, np.array([0.0]))
     assert found.converged
     assert found.iterations == 7
-
-
-def test_a_parameter_that_acts_by_its_square_is_brought_to_rest() -> None:
-    """Residuals (x^2 - 0.04) c and a weak pull: the steps overshoot the two hollows and would swing between them."""
-
-    class Square:
-        def residual(self, at: Float) -> Float:
-            return np.array([1.0 - 30.0 * at[0] ** 2, -1.0 - 30.0 * at[0] ** 2, -at[0] / 0.3])
-
-        def jacobian(self, at: Float) -> Float:
-            return np.array([[60.0 * at[0]], [60.0 * at[0]], [1 / 0.3]])
-
-        def settle(self, at: Float, solution: Solution, still: bool) -> bool:
-            return True
-
-    found = gauss_newton(Square(), np.array([0.05]))
-    assert found.converged
-    assert found.at == pytest.approx([0.0], abs=1e-6)

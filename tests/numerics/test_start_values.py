@@ -10,7 +10,7 @@ from registry.numerics.observability import to_quantities
 from registry.numerics.stacks import CountsStack
 from registry.numerics.start_values import find_start
 
-from .drives import Truth, drive, half_loop, read_ends, round_square, session, straight
+from .drives import Truth, drive, half_loop, read_ends, round_square, session, spin, straight
 
 
 @pytest.mark.parametrize("seed", range(3))
@@ -38,6 +38,21 @@ def test_a_start_is_found_without_counted_turns(seed: int) -> None:
     runs = [drive(legs, truth, rng, rate_hz=10.0) for legs in courses]
     closures, levers = read_ends(runs, rng), np.zeros((len(runs), 2))
     start = find_start([run.ticks for run in runs], levers, closures, np.array([3.5e-4, 3.5e-4, 0.62]))
+    assert start / truth.parameters == pytest.approx(np.ones(3), abs=0.01)
+
+
+@pytest.mark.parametrize("ruler_share", [1 / 1.8, 1.0, 1.5], ids=lambda share: f"ruler {share:.2f}")
+@pytest.mark.parametrize("seed", range(2))
+def test_a_start_is_found_from_spins_whose_turns_nobody_counted(seed: int, ruler_share: float) -> None:
+    """Of five turns more or less, a heading tells what is left over; loops and traverses say how many they were."""
+    rng = np.random.default_rng(70 + seed)
+    truth = Truth(3.46e-4, 3.52e-4, 0.9, 0.49e-6)
+    courses = [straight(10.0)] * 3 + [spin(5), spin(-5), spin(5), spin(-5)]
+    courses += [half_loop(4.0, 1), half_loop(4.0, -1), [(4.0, 0.0), (0.0, 0.8), (5.0, 0.0)]]
+    runs = [drive(legs, truth, rng, rate_hz=10.0) for legs in courses]
+    closures, levers = read_ends(runs, rng), np.zeros((len(runs), 2))
+    nominal = np.array([3.5e-4, 3.5e-4, truth.width_m * ruler_share])
+    start = find_start([run.ticks for run in runs], levers, closures, nominal)
     assert start / truth.parameters == pytest.approx(np.ones(3), abs=0.01)
 
 
