@@ -1,8 +1,7 @@
 """Closures and misclosures of many runs at once.
 
 A closure is any subset of four measured components, in this order: x, y, heading, straight distance. Absent components
-are
-carried as masked rows (zero residual, zero Jacobian, unit variance), so that all runs share one array shape and an
+are carried as masked rows (zero residual, zero Jacobian, unit variance), so that all runs share one array shape and an
 absent component adds nothing to any likelihood or information.
 
 Headings are compared modulo a full turn unless the whole turns were counted.

@@ -175,8 +175,7 @@ def _orders(z_common: float, z_difference: float, wanted: float) -> tuple[tuple[
     """Numbers of nodes for two phases and the relative error bound they give.
 
     Interpolation at N nodes errs by at most twice the tail of the coefficients from N on; the linear factor in front
-    of the
-    exponential moves the tail by one. A tensor errs by the first direction's error plus the second's times the
+    of the exponential moves the tail by one. A tensor errs by the first direction's error plus the second's times the
     Lebesgue constant of the first.
     """
     degrees = np.arange(1, 61)

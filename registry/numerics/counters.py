@@ -1,9 +1,8 @@
 """From counter readings to signed increments, and what to suspect when an increment is impossible.
 
 A counter of b bits wraps modulo 2^b in either direction. The signed increment between two readings is the
-representative
-of their difference nearest to zero; it is right as long as a side rolls less than half the counter's range between two
-samples, whatever the sampling.
+representative of their difference nearest to zero; it is right as long as a side rolls less than half the counter's
+range between two samples, whatever the sampling.
 """
 
 from __future__ import annotations

@@ -5,9 +5,8 @@ width*. A fit moves in :math:`\psi = (\ln\text{tick factor},\ \text{side ratio},
 :math:`\rho`, :math:`k_L = 2k/(2+\rho)` and :math:`k_R = 2k(1+\rho)/(2+\rho)`.
 
 Whether runs determine a quantity follows from their information matrix alone: closed loops leave all three free to
-scale
-together, a straight says nothing on the width. A quantity counts as observed when its data-only standard uncertainty
-is at most a third of its tolerance.
+scale together, a straight says nothing on the width. A quantity counts as observed when its data-only standard
+uncertainty is at most a third of its tolerance.
 """
 
 from __future__ import annotations

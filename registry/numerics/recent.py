@@ -4,12 +4,10 @@ A robust fit of a window stays with its majority, and a drift hides in the mean.
 part is tried: the quantities that the runs from there on ask for are compared with those of the runs before, both
 linearised at the window's fit, by :math:`d^T(A_1^{-1} + A_2^{-1})^{-1}d` with the information :math:`A` of each part
 (the likelihood ratio of one change against none, Page 1955). What runs do not tell adds nothing to it. One run's share
-is
-bounded by its weight in the fit, so that neither one nor two wild runs can part a window, and three that agree can.
+is bounded by its weight in the fit, so that neither one nor two wild runs can part a window, and three that agree can.
 
 The threshold is from simulation with normal deviates in three quantities: 20,000 windows of 60 quiet runs exceed it
-once
-in 2,000 (0.9997 quantile 24.9 for 60 runs, 24.5 for 30, 23.2 for 12).
+once in 2,000 (0.9997 quantile 24.9 for 60 runs, 24.5 for 30, 23.2 for 12).
 
 References
 ----------

@@ -1,16 +1,14 @@
 r"""Covariance of the end pose from noise in the rolling of each side.
 
 Each side's error variance grows with the distance it rolls, :math:`\sigma^2 = q\,|l|` (Chong and Kleeman 1997). An
-error in
-the left side at a point of the path moves the end by half of it along the heading there and turns the rest of the path
-by :math:`-1/W` of it:
+error in the left side at a point of the path moves the end by half of it along the heading there and turns the rest of
+the path by :math:`-1/W` of it:
 
 .. math:: g_L = \left(\tfrac12\cos\varphi + \tfrac{Y}{W},\ \tfrac12\sin\varphi - \tfrac{X}{W},\ -\tfrac1W\right)
 
 with (X, Y) the way still to go; on the right side the signs of the turned parts change. The covariance for q = 1 is
 :math:`N = \int |dl|\,g_L g_L^T + |dr|\,g_R g_R^T`, taken with two Gauss points per sample so that it does not depend
-on how
-the samples are cut (exact on a straight of one sample).
+on how the samples are cut (exact on a straight of one sample).
 
 References
 ----------

@@ -2,8 +2,7 @@ r"""A first guess of the parameters from runs, when the ruler's width may be wro
 
 Runs that hardly turn give the scale; then every width on a grid fine enough that no heading can slip a full turn
 between neighbours is tried, with the side ratio that the straight runs ask for at that width. The best few are refined
-by
-the fit itself on thinned counts, and the one with the smallest deviance is the start.
+by the fit itself on thinned counts, and the one with the smallest deviance is the start.
 
 Why this form: the deviance in the width has one minimum per whole turn of the most turning run. A search over all of
 them costs a fraction of a second once per baseline; a descent from the ruler's width finds the wrong one.
