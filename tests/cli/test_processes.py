@@ -125,13 +125,23 @@ def children_of(process: subprocess.Popen[str]) -> list[int]:
     return [pid for pid in found if b"spawn_main" in Path(f"/proc/{pid}/cmdline").read_bytes()]
 
 
+def listeners(address: str) -> int:
+    """How many sockets listen at the address: one for every server process that is up."""
+    port = f"{int(address.rsplit(':', 1)[1]):04X}"
+    rows = [line.split() for line in Path("/proc/net/tcp").read_text(encoding="ascii").splitlines()[1:]]
+    return sum(row[1].endswith(f":{port}") and row[3] == "0A" for row in rows)
+
+
 def test_a_server_process_that_dies_is_replaced_while_the_other_answers(rollbook: Commands, tug: str):
     with running("serve", "--home", rollbook.home, "--port", 0, "--no-schedule", "--json") as serving:
         address = first_document(serving)["address"]
         before = children_of(serving)
+        deadline = time.monotonic() + 60
+        while listeners(address) < len(before):  # The first answer comes when the first of them is up.
+            assert time.monotonic() < deadline
+            time.sleep(0.1)
         os.kill(before[0], signal.SIGKILL)
         cut_off = 0
-        deadline = time.monotonic() + 60
         while len(set(children_of(serving)) - {before[0]}) < len(before):
             assert time.monotonic() < deadline
             try:
