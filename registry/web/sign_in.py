@@ -9,6 +9,7 @@ from __future__ import annotations
 import hashlib
 import hmac
 from collections.abc import Callable
+from functools import cached_property
 
 from flask import Blueprint, Flask, Response, flash, make_response, redirect, render_template, request, session, url_for
 from flask_login import LoginManager, current_user, login_user, logout_user
@@ -58,8 +59,10 @@ class SignedIn:
 class Tries:
     """Counts failed tries, in this process."""
 
-    def __init__(self) -> None:
-        self._window = MovingWindowRateLimiter(MemoryStorage())
+    @cached_property
+    def _window(self) -> MovingWindowRateLimiter:
+        # Its storage starts a thread, which making an application must not: it is made with the first try.
+        return MovingWindowRateLimiter(MemoryStorage())
 
     def may(self, name: str) -> bool:
         """Whether another try under this name from this address is due."""
