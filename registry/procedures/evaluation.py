@@ -113,14 +113,16 @@ def evaluate_vehicle(
         _still_ours(c, services, holder)
         if lost:
             _leave_ground(c, services, question, as_of, lost)
-        evaluation = None
+        evaluation, spoken = None, question.last is None or question.moved or bool(lost or wishes)
         if answer is not None and _same_ground(c, question, vehicle_id, as_of):
-            evaluation = _record(c, services, question, answer, as_of)
+            evaluation, alerted = _record(c, services, question, answer, as_of)
+            spoken = spoken or alerted
         if wishes:
             # Asked again: another calibration may have come into force, or a boot in, while the runs were fitted.
             for wish in _wishes(c, services, question, in_force_store.in_force(c, vehicle_id, as_of), as_of):
                 standing_questions.grant(c, services, vehicle_id, wish, as_of)
-        refresh_sheet(c, vehicle_id, services.now())
+        if spoken:  # A quiet look moves nothing that the vehicle is told at boot.
+            refresh_sheet(c, vehicle_id, services.now())
     return evaluation
 
 
@@ -207,12 +209,16 @@ def _leave_ground(c: Connection, services: Services, question: _Question, as_of:
     proposals.drop(c, services, question.version.vehicle_id, why)
 
 
-def _record(c: Connection, services: Services, question: _Question, answer: _Answer, as_of: datetime) -> Evaluation:
+def _record(
+    c: Connection, services: Services, question: _Question, answer: _Answer, as_of: datetime
+) -> tuple[Evaluation, bool]:
+    """Write what was found; answer it, and whether an alert on a deviation stood before or stands now."""
     vehicle_id, now = question.version.vehicle_id, services.now()
     verdict = answer.verdict
     for run_id, item in verdict.new_maps.items():
         run_store.put_map(c, run_id, closure_map.encode(item))
-    standing = [] if question.late else _holding(c, question, verdict)
+    causes = _causes(c, vehicle_id)
+    standing = [] if question.late else _holding(causes, verdict)
     proposal = None
     if not question.late and question.held == _present(c, vehicle_id):
         proposal = proposals.settle(c, services, vehicle_id, question.held, verdict.proposal, keep=bool(standing))
@@ -234,9 +240,9 @@ def _record(c: Connection, services: Services, question: _Question, answer: _Ans
         "message": verdict.result.message,
     }
     journal.write(c, now, "schedule", "evaluated", vehicle_id, what)
-    if not question.late:
+    if not question.late and (causes or standing):
         _follow_alerts(c, services, question, answer, standing, proposal, as_of)
-    return evaluation
+    return evaluation, bool(causes or standing)
 
 
 def _present(c: Connection, vehicle_id: str) -> str | None:
@@ -245,10 +251,17 @@ def _present(c: Connection, vehicle_id: str) -> str | None:
     return None if entry is None else entry.calibration_id
 
 
-def _holding(c: Connection, question: _Question, verdict: Verdict) -> list[Quantity]:
+def _causes(c: Connection, vehicle_id: str) -> set[str]:
+    """Deviations of which an alert stands."""
+    return {
+        one.content.cause()
+        for one in alert_store.open_for(c, vehicle_id)
+        if one.standing != "returned" and one.content.kind == "beyond_tolerance"
+    }
+
+
+def _holding(causes: set[str], verdict: Verdict) -> list[Quantity]:
     """Quantities of which an alert stands after this verdict: raised by it, kept in the dead band, or not spoken of."""
-    open_alerts = alert_store.open_for(c, question.version.vehicle_id)
-    causes = {one.content.cause() for one in open_alerts if one.standing != "returned"}
     found: list[Quantity] = []
     for quantity, item, sure in zip(QUANTITIES, verdict.result.quantities(), verdict.confirmed, strict=True):
         stands = f"beyond_tolerance:{quantity}" in causes

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 
 from registry.domain.calibration import Calibration, CalibrationResult
@@ -46,7 +48,7 @@ def settle(
     current = standing[-1] if standing and standing[-1].based_on == in_force and _is_sound(c, standing[-1]) else None
     if current is not None and (keep if wanted is None else _says_the_same(current, wanted)):
         return current
-    drop(c, services, vehicle_id, "a later evaluation says otherwise")
+    _supersede(c, services, standing, "a later evaluation says otherwise")
     if wanted is None:
         return None
     now = services.now()
@@ -58,7 +60,11 @@ def settle(
 
 def drop(c: Connection, services: Services, vehicle_id: str, why: str) -> None:
     """Supersede the open proposals of evaluations."""
-    for old in calibration_store.open_proposals(c, vehicle_id, "evaluation"):
+    _supersede(c, services, calibration_store.open_proposals(c, vehicle_id, "evaluation"), why)
+
+
+def _supersede(c: Connection, services: Services, standing: Sequence[Calibration], why: str) -> None:
+    for old in standing:
         calibration_store.add_standing(c, old.calibration_id, "superseded", services.now(), _BY, why)
 
 
