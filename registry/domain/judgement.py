@@ -13,7 +13,7 @@ from registry.domain.maintenance import MAINTENANCE_WORDS, Maintenance
 from registry.domain.settling import cannot_tell
 from registry.domain.tolerance import QUANTITIES, QUANTITY_WORDS, Quantity, Tolerance
 from registry.domain.vehicle import Drive
-from registry.numerics.conformity import ACT_AT, CLEAR_AT, WATCH_AT
+from registry.numerics.conformity import decide
 
 #: After an adoption a vehicle has this long to load the new set before somebody is sent to it.
 LOAD_WITHIN = timedelta(days=3)
@@ -53,11 +53,9 @@ def finding_of(quantities: Sequence[QuantityFinding], *, confirmed: bool) -> Fin
     Two quantities within tolerance say nothing of the third: ``within`` would read as all well.
     """
     probabilities = [item.probability_beyond for item in quantities if item.probability_beyond is not None]
-    worst = max(probabilities, default=0.0)
-    if worst >= ACT_AT and confirmed:
-        return "beyond"
-    if worst >= WATCH_AT:
-        return "uncertain"
+    decision = decide(max(probabilities, default=0.0))
+    if decision != "within":
+        return decision if confirmed else "uncertain"
     return "within" if all(item.observed for item in quantities) else "cannot_tell"
 
 
@@ -92,8 +90,8 @@ def holds_beyond(item: QuantityFinding, *, was_open: bool, confirmed: bool) -> b
     if probability is None:
         return None
     if was_open:
-        return probability > CLEAR_AT
-    return True if probability >= ACT_AT and confirmed else None
+        return decide(probability, "beyond") != "within"
+    return True if decide(probability) == "beyond" and confirmed else None
 
 
 def beyond_tolerance(
@@ -121,7 +119,7 @@ def beyond_tolerance(
     item, limit = result.quantities()[index], tolerance.as_tuple()[index]
     deviation, u = item.deviation or 0.0, item.u or 0.0
     far = abs(deviation) >= _FAR * limit
-    decide = (
+    decision = (
         f"decide on calibration {proposal.number}, which is proposed"
         if proposal is not None
         else "drive calibration runs and propose a new baseline"
@@ -135,7 +133,7 @@ def beyond_tolerance(
             f"(tolerance {100.0 * limit:g} %)"
         ),
         consequence=f"The vehicle {consequence(quantity, deviation, against.result.parameters.width_m)}.",
-        advice=f"{first} {decide}.",
+        advice=f"{first} {decision}.",
         priority="high" if far else "medium",
         act_within="before it drives" if far else "this shift",
         size=deviation,
