@@ -9,7 +9,6 @@ from __future__ import annotations
 
 from seed_demo.fleet import Change, Make, Story, Vehicle, Work, WrongEntry
 
-PLACE = "Tolmera Salt Gardens"
 NORTH, SOUTH = "North pans", "South pans"
 
 RAKE = Make(

@@ -16,7 +16,6 @@ import numpy as np
 
 from registry.numerics.arrays import Bool, Float
 
-COMPONENTS = ("x", "y", "heading", "distance")
 HEADING = 2
 DISTANCE = 3
 #: A predicted distance below this has no direction; its gradient is taken as zero instead of dividing by nothing.

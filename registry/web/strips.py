@@ -20,7 +20,6 @@ from registry.domain.tolerance import QUANTITY_WORDS, Quantity
 from registry.web.figures import decimals, interval, percent
 
 VIEW_WIDTH = 240.0
-VIEW_HEIGHT = 48.0
 MIDDLE = VIEW_WIDTH / 2.0
 #: One tolerance in view box units: the view reaches half a tolerance beyond either jaw.
 REACH = 76.0
